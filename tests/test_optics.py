@@ -42,10 +42,11 @@ def test_first_dark_ring_of_the_point_image_is_at_the_rayleigh_distance() -> Non
 
 
 def test_pixel_footprint_is_the_average_of_a_wave_over_the_pixel() -> None:
-    pixel, ky, kx = 2e-6, 1.1e6, -0.7e6
-    places = ((np.arange(1000) + 0.5) / 1000 - 0.5) * pixel
-    wave = np.exp(1j * (ky * places[:, None] + kx * places))
-    assert pixel_footprint(ky, kx, pixel) == pytest.approx(wave.mean().real, abs=1e-6)
+    height, width, ky, kx = 2e-6, 3e-6, 1.1e6, -0.7e6
+    places = (np.arange(1000) + 0.5) / 1000 - 0.5
+    wave = np.exp(1j * (ky * height * places[:, None] + kx * width * places))
+    assert pixel_footprint(ky, kx, (height, width)) == pytest.approx(wave.mean().real, abs=1e-6)
+    assert pixel_footprint(ky, kx, 2e-6) == pixel_footprint(ky, kx, (2e-6, 2e-6))
 
 
 def test_pixel_footprint_broadcasts() -> None:

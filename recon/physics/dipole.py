@@ -111,37 +111,6 @@ def lateral_footprint(wavenumber: ArrayLike, edge: float) -> FloatArray:
     return np.asarray(np.sinc(cycles), dtype=np.float64)
 
 
-def point_dipole_field(
-    offset_z: ArrayLike,
-    offset_y: ArrayLike,
-    offset_x: ArrayLike,
-    sensing_direction: ArrayLike,
-    moment_direction: ArrayLike,
-) -> ComplexArray:
-    """Field component of a point dipole of unit moment, T per A·m², in real space.
-
-    (μ0/4π) [3 (n·r)(m·r)/r² − n·m] / r³ with r from the dipole to the place of the field.
-
-    Parameters
-    ----------
-    offset_z, offset_y, offset_x
-        Components of r, m; they broadcast together.
-    sensing_direction
-        Unit vector n (x, y, z).
-    moment_direction
-        Complex vector m (x, y, z).
-    """
-    normal, moment = np.asarray(sensing_direction), np.asarray(moment_direction)
-    z, y, x = np.asarray(offset_z), np.asarray(offset_y), np.asarray(offset_x)
-    square = x * x + y * y + z * z
-    along_normal = normal[0] * x + normal[1] * y + normal[2] * z
-    along_moment = moment[0] * x + moment[1] * y + moment[2] * z
-    inverse = 1.0 / square
-    shape = 3 * along_normal * along_moment * inverse - normal @ moment
-    scale = constants.mu_0 / (4 * np.pi)
-    return np.asarray(scale * shape * inverse * np.sqrt(inverse), dtype=np.complex128)
-
-
 def _unit(vector: ArrayLike) -> FloatArray:
     """The vector divided by its length."""
     array = np.asarray(vector, dtype=np.float64)

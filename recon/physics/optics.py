@@ -32,19 +32,21 @@ def optical_transfer(
     return np.asarray(2 / np.pi * overlap, dtype=np.float64)
 
 
-def pixel_footprint(wavenumber_y: ArrayLike, wavenumber_x: ArrayLike, pixel: float) -> FloatArray:
-    """Fourier average over a square camera pixel, unitless; the two components broadcast.
+def pixel_footprint(
+    wavenumber_y: ArrayLike, wavenumber_x: ArrayLike, pixel: float | tuple[float, float]
+) -> FloatArray:
+    """Fourier average over a rectangular camera pixel, unitless; the two components broadcast.
 
-    sinc(κy p/2) sinc(κx p/2) with sinc(u) = sin(u)/u.
+    sinc(κy p_y/2) sinc(κx p_x/2) with sinc(u) = sin(u)/u.
 
     Parameters
     ----------
     wavenumber_y, wavenumber_x
         Components of the lateral wavevector on the sensor side, rad/m.
     pixel
-        Pixel edge projected onto the sensor layer, m.
+        Pixel edge, or edges along (y, x), projected onto the sensor layer, m.
     """
-    scale = pixel / (2 * np.pi)
-    along_y = np.sinc(np.asarray(wavenumber_y, dtype=np.float64) * scale)
-    along_x = np.sinc(np.asarray(wavenumber_x, dtype=np.float64) * scale)
+    edge_y, edge_x = np.broadcast_to(np.asarray(pixel, dtype=np.float64), 2) / (2 * np.pi)
+    along_y = np.sinc(np.asarray(wavenumber_y, dtype=np.float64) * edge_y)
+    along_x = np.sinc(np.asarray(wavenumber_x, dtype=np.float64) * edge_x)
     return np.asarray(along_y * along_x, dtype=np.float64)
