@@ -30,7 +30,7 @@ from recon.errors import InputError
 from recon.instrument import Instrument
 from recon.protocol import Protocol
 from recon.specimen import Specimen
-from recon.store import open_store, read_dataset, read_text, reading, write_store
+from recon.store import StoreFile, open_store, read_dataset, read_text, reading, write_store
 
 KIND = "record"
 BATCH_BYTES = 16 * 2**20
@@ -227,8 +227,8 @@ class RecordWriter:
         self.shape = samples_shape(instrument, protocol)
         self.written = 0
         self._contents = (instrument, protocol, description_json, _noise(noise_sd, str(path)))
-        self._store: AbstractContextManager[h5py.File] | None = None
-        self._samples: h5py.Dataset | None = None
+        self._store: AbstractContextManager[StoreFile] | None = None
+        self._file: StoreFile | None = None
 
     def __enter__(self) -> Self:
         instrument, protocol, description, noise_sd = self._contents
@@ -240,16 +240,17 @@ class RecordWriter:
             protocol.write(file.create_group("protocol"))
             file.attrs["noise_sd_T"] = noise_sd
             file.attrs["view_um"] = [edge * 1e6 for edge in instrument.view]
-            self._samples = file.create_dataset("samples", self.shape, np.complex64)
+            file.create_dataset("samples", self.shape, np.complex64, track_times=False)
+            file.check()
         except BaseException as error:
             store.__exit__(type(error), error, error.__traceback__)
             raise
-        self._store = store
+        self._store, self._file = store, file
         return self
 
     def append(self, samples: NDArray[Any]) -> None:
         """Write the next shots: (n, times, channels y, channels x), tesla."""
-        if self._samples is None:
+        if self._file is None:
             raise RuntimeError("append is for use inside the `with` block")
         block = np.ascontiguousarray(samples, np.complex64)
         if block.shape[1:] != self.shape[1:]:
@@ -260,7 +261,8 @@ class RecordWriter:
             what = f"samples of {stop} shots, the protocol has {len(self)}"
             raise InputError(what, str(self.path))
         check_finite(block, self.written, str(self.path))
-        self._samples.write_direct(block, dest_sel=np.s_[self.written : stop])
+        self._file["samples"].write_direct(block, dest_sel=np.s_[self.written : stop])
+        self._file.check()
         self.written = stop
 
     def __len__(self) -> int:
@@ -272,7 +274,7 @@ class RecordWriter:
         error: BaseException | None,
         trace: TracebackType | None,
     ) -> None:
-        store, self._store, self._samples = self._store, None, None
+        store, self._store, self._file = self._store, None, None
         assert store is not None
         if error is None and self.written < len(self):
             what = f"samples of {self.written} shots, the protocol has {len(self)}"

@@ -7,11 +7,11 @@ number that grows when the layout changes). Arrays are plain datasets; nothing i
 from __future__ import annotations
 
 import dataclasses
-import errno
+import io
 import os
 import re
 from collections.abc import Iterator
-from contextlib import contextmanager, suppress
+from contextlib import contextmanager
 from enum import Enum
 from pathlib import Path
 from typing import Any, TypeVar, get_type_hints
@@ -29,8 +29,56 @@ FORMAT_VERSION = 1
 Stored = TypeVar("Stored")
 
 
+class _Sink:
+    """A file for the HDF5 library to write to, which keeps a disk error to itself.
+
+    The library cannot close a file whose writes fail: it crashes the program later. So the first
+    error is kept, further writes are dropped, and `StoreFile.check` raises it.
+    """
+
+    def __init__(self, raw: io.FileIO) -> None:
+        self.raw = raw
+        self.error: OSError | None = None
+        self.seek, self.tell = raw.seek, raw.tell
+        self.read, self.readinto = raw.read, raw.readinto
+
+    def write(self, data: bytes | memoryview) -> int:
+        left = memoryview(data).cast("B")
+        size = len(left)
+        try:
+            while len(left) and self.error is None:
+                left = left[self.raw.write(left) :]
+        except OSError as error:
+            self.error = error
+        return size
+
+    def truncate(self, size: int) -> int:
+        try:
+            if self.error is None:
+                self.raw.truncate(size)
+        except OSError as error:
+            self.error = error
+        return size
+
+    def flush(self) -> None:
+        """Nothing is held back."""
+
+
+class StoreFile(h5py.File):  # type: ignore[misc]
+    """An HDF5 file being written."""
+
+    def __init__(self, raw: io.FileIO) -> None:
+        self._sink = _Sink(raw)
+        super().__init__(self._sink, "w")
+
+    def check(self) -> None:
+        """Raise the disk's error, if there was one; for writers of long files to stop early."""
+        if self._sink.error is not None:
+            raise self._sink.error
+
+
 @contextmanager
-def write_store(target: Path | str, kind: str) -> Iterator[h5py.File]:
+def write_store(target: Path | str, kind: str) -> Iterator[StoreFile]:
     """Give a new HDF5 file of this kind; it takes the name `target` only if the block succeeds.
 
     Raises
@@ -38,17 +86,12 @@ def write_store(target: Path | str, kind: str) -> Iterator[h5py.File]:
     InputError
         The folder cannot be written or the disk is full; an existing `target` is untouched.
     """
-    with atomic_path(target) as temporary, _system_errors():
-        file = h5py.File(temporary, "w")
-        try:
+    with atomic_path(target) as temporary, io.FileIO(temporary, "w+") as raw:
+        with StoreFile(raw) as file:
             file.attrs[KIND] = kind
             file.attrs[FORMAT] = FORMAT_VERSION
             yield file
-        except BaseException:
-            with suppress(Exception):
-                file.close()
-            raise
-        file.close()
+        file.check()
 
 
 @contextmanager
@@ -207,29 +250,7 @@ def _required(field: dataclasses.Field[Any]) -> bool:
     return field.default is missing and field.default_factory is missing
 
 
-@contextmanager
-def _system_errors() -> Iterator[None]:
-    """Give the HDF5 library's long complaints about the disk their plain system error."""
-    try:
-        yield
-    except InputError:
-        raise
-    except (OSError, RuntimeError) as error:
-        number = _error_number(error)
-        if number is None:
-            raise
-        raise OSError(number, os.strerror(number)) from error
-
-
-def _error_number(error: Exception) -> int | None:
-    stated = re.search(r"errno = (\d+)", str(error))
-    if stated:
-        return int(stated[1])
-    if isinstance(error, OSError):
-        return error.errno or errno.EIO
-    return None
-
-
 def _reason(error: Exception) -> str:
-    number = _error_number(error)
-    return os.strerror(number) if number not in (None, errno.EIO) else str(error)
+    """The system's short reason where the HDF5 library's long complaint quotes one."""
+    stated = re.search(r"errno = ([1-9]\d*)", str(error))
+    return os.strerror(int(stated[1])) if stated else str(error)
