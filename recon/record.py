@@ -14,6 +14,7 @@ The samples are stored contiguously, so that reading runs at the speed of the fi
 
 from __future__ import annotations
 
+import io
 from collections.abc import Iterator
 from contextlib import AbstractContextManager
 from dataclasses import dataclass
@@ -33,7 +34,7 @@ from recon.specimen import Specimen
 from recon.store import StoreFile, open_store, read_dataset, read_text, reading, write_store
 
 KIND = "record"
-BATCH_BYTES = 16 * 2**20
+BATCH_BYTES = 4 * 2**20
 """Size of the buffer through which a record is read or written, unless a batch is stated."""
 
 Samples = NDArray[np.complex64]
@@ -172,13 +173,13 @@ class Record:
 
     def _shots_from_file(self, path: Path, size: int) -> Iterator[tuple[slice, Samples]]:
         buffer = np.empty((min(size, len(self)), *self.shape[1:]), np.complex64)
-        with open_store(path, KIND) as file:
+        with open_store(path, KIND) as file, path.open("rb", buffering=0) as raw:
             samples = read_dataset(file, "samples", str(path))
             _check_samples(samples.shape, samples.dtype, self.instrument, self.protocol, str(path))
             for where in _slices(len(self), size):
                 block = buffer[: where.stop - where.start]
                 with reading(str(path)):
-                    samples.read_direct(block, np.s_[where])
+                    _read_shots(samples, raw, where.start, block)
                 check_finite(block, where.start, self.where)
                 yield where, block
 
@@ -318,6 +319,21 @@ def _check_samples(
     if shape[2:] != wanted[2:]:
         what = f"samples of {shape[2:]} channels (y, x), the detector has {wanted[2:]}"
         raise InputError(what, where)
+
+
+def _read_shots(samples: h5py.Dataset, raw: io.FileIO, start: int, block: Samples) -> None:
+    """Fill `block` with the shots from `start` on, past the HDF5 library where it can be."""
+    offset = samples.id.get_offset()
+    if offset is None:  # stored in chunks
+        samples.read_direct(block, np.s_[start : start + len(block)])
+        return
+    left = block.reshape(-1).view(np.uint8).data
+    raw.seek(offset + start * block[0].nbytes)
+    while len(left):
+        count = raw.readinto(left)
+        if not count:
+            raise OSError("the file ends within the samples")
+        left = left[count:]
 
 
 def _noise(value: Any, where: str) -> float:
