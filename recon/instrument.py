@@ -43,7 +43,7 @@ from typing import Annotated, Literal, Self
 
 import numpy as np
 from numpy.typing import NDArray
-from pydantic import Field, model_validator
+from pydantic import Field, ValidationInfo, field_validator, model_validator
 
 from recon.errors import InputError, InputWarning
 from recon.physics import magnetisation, photons
@@ -157,27 +157,34 @@ class OneDetector(Description):
 
 
 class Gradients(Description):
-    """Pulsed gradients: strengths per component, one number standing for all of them.
+    """Pulsed gradients: strengths per component (x, y, z), or one number for all of them.
 
     The largest wavevector is 2π γ G τ, with γ in Hz/T of the proton for the nuclei and of the
     electron for the sensor spins.
     """
 
-    nuclear_strength_mT_per_m: NotNegative | tuple[NotNegative, NotNegative, NotNegative] = 0.0
+    nuclear_strength_mT_per_m: tuple[NotNegative, NotNegative, NotNegative] = (0.0, 0.0, 0.0)
     nuclear_pulse_max_ms: NotNegative = 0.0
-    sensor_strength_mT_per_m: NotNegative | tuple[NotNegative, NotNegative] = 0.0
+    sensor_strength_mT_per_m: tuple[NotNegative, NotNegative] = (0.0, 0.0)
     sensor_pulse_max_us: NotNegative = 0.0
+
+    @field_validator("nuclear_strength_mT_per_m", "sensor_strength_mT_per_m", mode="before")
+    @classmethod
+    def _one_for_all(cls, value: object, info: ValidationInfo) -> object:
+        if isinstance(value, int | float):
+            return (value,) * (3 if info.field_name == "nuclear_strength_mT_per_m" else 2)
+        return value
 
     @property
     def nuclear_wavevector_limit(self) -> Vector:
         """Largest |kx|, |ky|, |kz| on the nuclei, (3,), rad/m."""
-        strength = np.broadcast_to(np.array(self.nuclear_strength_mT_per_m) / 1e3, 3)
+        strength = np.array(self.nuclear_strength_mT_per_m) / 1e3
         return 2 * np.pi * PROTON_HZ_PER_T * strength * (self.nuclear_pulse_max_ms / 1e3)
 
     @property
     def sensor_wavevector_limit(self) -> Vector:
         """Largest |qx|, |qy| on the sensor spins, (2,), rad/m."""
-        strength = np.broadcast_to(np.array(self.sensor_strength_mT_per_m) / 1e3, 2)
+        strength = np.array(self.sensor_strength_mT_per_m) / 1e3
         return 2 * np.pi * ELECTRON_HZ_PER_T * strength * (self.sensor_pulse_max_us / 1e6)
 
 

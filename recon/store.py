@@ -105,7 +105,8 @@ def open_store(path: Path | str, kind: str) -> Iterator[h5py.File]:
     """
     file = _opened(Path(path))
     try:
-        _check_kind(file, Path(path), kind)
+        with reading(str(path)):
+            _check_kind(file, Path(path), kind)
         yield file
     finally:
         file.close()
@@ -113,7 +114,7 @@ def open_store(path: Path | str, kind: str) -> Iterator[h5py.File]:
 
 def store_kind(path: Path | str) -> str:
     """What an HDF5 file of ours holds, such as "record" or "protocol"."""
-    with _opened(Path(path)) as file:
+    with _opened(Path(path)) as file, reading(str(path)):
         return _kind(file, Path(path))
 
 
@@ -159,12 +160,23 @@ def read_fields(group: h5py.Group, cls: type[Stored], where: str) -> Stored:
         if field.name in group:
             values[field.name] = _read_node(group, field.name, hints[field.name], where)
         elif field.name in group.attrs:
-            values[field.name] = _plain(group.attrs[field.name], hints[field.name])
+            with _refused(where):
+                values[field.name] = _plain(group.attrs[field.name], hints[field.name])
         elif _required(field) and type(None) not in getattr(hints[field.name], "__args__", ()):
             raise InputError(f"field '{field.name}' is missing", where, "write the file again")
         elif _required(field):
             values[field.name] = None
-    return cls(**values)
+    with _refused(where):
+        return cls(**values)
+
+
+@contextmanager
+def _refused(where: str) -> Iterator[None]:
+    """Name the file in whatever a dataclass says about its values."""
+    try:
+        yield
+    except (TypeError, ValueError) as error:
+        raise InputError(str(error), where) from error
 
 
 def read_dataset(group: h5py.Group, name: str, where: str) -> h5py.Dataset:
@@ -177,18 +189,22 @@ def read_dataset(group: h5py.Group, name: str, where: str) -> h5py.Dataset:
 
 def read_text(group: h5py.Group, name: str, where: str) -> str:
     """A text dataset of a group."""
-    value = read_dataset(group, name, where)[()]
-    return value.decode() if isinstance(value, bytes) else str(value)
+    dataset = read_dataset(group, name, where)
+    with reading(where):
+        value = dataset[()]
+        return value.decode() if isinstance(value, bytes) else str(value)
 
 
 @contextmanager
 def reading(where: str) -> Iterator[None]:
-    """Turn what the HDF5 library says about damaged contents into one line."""
+    """Turn what is said about damaged contents into one line that names the file."""
     try:
         yield
-    except InputError:
-        raise
-    except (OSError, RuntimeError, KeyError) as error:
+    except InputError as error:
+        if where in str(error):
+            raise
+        raise InputError(str(error), where) from error
+    except (OSError, RuntimeError, KeyError, TypeError, ValueError) as error:
         raise InputError(f"cannot be read ({_reason(error)})", where) from error
 
 

@@ -153,9 +153,12 @@ def _unknown_field(
 def _mistake(kind: str, location: Location, item: Mapping[str, Any], where: str) -> InputError:
     if kind == "missing":
         place, name = _place(where, location[:-1]), location[-1]
-        return InputError(f"field '{name}' is missing", place)
+        what = f"field '{name}'" if isinstance(name, str) else f"number {name + 1}"
+        return InputError(f"{what} is missing", place)
     message = str(item["msg"]).removeprefix("Value error, ")
     message = message.replace("Input should be", "must be")
+    if kind == "model_type":
+        message = "must be a section with fields"
     given = repr(item["input"])
     if isinstance(item["input"], Mapping | BaseModel) or len(given) > 60:
         return InputError(message, _place(where, location))
