@@ -84,3 +84,34 @@ def weak_field_from_counts(
     """
     sine = (counts / photons - 1) * (2 / contrast) + 1
     return sine / phase_per_field(sensing_time, efficiency)
+
+
+def counted_field(
+    field: FloatArray,
+    photons: float,
+    contrast: float,
+    sensing_time: float,
+    efficiency: float,
+    generator: np.random.Generator,
+    normal_above: float,
+) -> FloatArray:
+    """One quadrature as counted: Poisson counts of the field, then `weak_field_from_counts`.
+
+    Parameters
+    ----------
+    field
+        True field of one quadrature, tesla, any shape.
+    generator
+        Source of the randomness.
+    normal_above
+        Mean count above which the normal distribution of equal mean and variance is drawn.
+    """
+    if photons * (1 - contrast / 2) <= normal_above:
+        mean = expected_counts(field, photons, contrast, sensing_time, efficiency)
+        counts = generator.poisson(mean).astype(np.float64)
+        return weak_field_from_counts(counts, photons, contrast, sensing_time, efficiency)
+    slope = phase_per_field(sensing_time, efficiency)
+    sine = np.sin(field * slope)
+    spread = np.sqrt((1 - contrast / 2 * (1 - sine)) / photons) * (2 / contrast)
+    spread *= generator.standard_normal(field.shape, np.float32)
+    return np.asarray((sine + spread) / slope)

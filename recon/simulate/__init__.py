@@ -1,0 +1,185 @@
+"""Specimen + instrument + protocol → record, by a model that is finer than the grid.
+
+The dipole formula is summed in real space (`recon.physics.real_space`) over the specimen's fine
+voxels, taken as uniformly filled and wound by the gradient inside each. Convolutions are
+zero-padded, so nothing wraps; the sensor layer goes on beyond the view, so light from its
+surroundings blurs in. Photons are counted. Nothing is shared with the forward operator but the
+descriptions and the optical transfer function.
+
+Approximations: the amplitude of a shot is the protocol's own (no T1 or diffusion); the light is
+point-sampled at fine voxels, each sample standing for its voxel's mean up to frequencies that
+the fine voxels resolve.
+"""
+
+from __future__ import annotations
+
+import warnings
+from collections.abc import Iterator
+from dataclasses import dataclass, field
+from pathlib import Path
+
+import numpy as np
+from numpy.typing import NDArray
+
+from recon.errors import InputError, InputWarning
+from recon.instrument import Instrument, Readout
+from recon.physics import photons
+from recon.protocol import Protocol
+from recon.record import Record, RecordWriter
+from recon.simulate.images import Progress, Samples, species_images
+from recon.simulate.noise import NoNoise, PhotonNoise, PoissonNoise
+from recon.simulate.scene import Scene
+from recon.specimen import Specimen
+
+__all__ = ["NoNoise", "PhotonNoise", "PoissonNoise", "SimulationOptions", "simulate"]
+
+LINEAR_PHASE = 0.3
+"""Sensor phase, rad, beyond which the small-signal reading is off by more than 1.5 %."""
+
+
+@dataclass(frozen=True)
+class SimulationOptions:
+    """How finely and with what flaws to simulate.
+
+    Attributes
+    ----------
+    lateral_refinement, axial_refinement
+        Factors on top of the specimen's own refinement; they refine the light's sampling and the
+        sums over the specimen, not its structure.
+    wavevector_jitter
+        Standard deviation of the relative error of every wavevector component; the protocol in
+        the record keeps the nominal ones.
+    photon_noise
+        `PoissonNoise()` or `NoNoise()`.
+    memory_limit_gib
+        The simulation is refused if it would need more.
+    """
+
+    lateral_refinement: int = 1
+    axial_refinement: int = 1
+    wavevector_jitter: float = 0.0
+    photon_noise: PhotonNoise = field(default_factory=PoissonNoise)
+    memory_limit_gib: float = 4.0
+
+    def __post_init__(self) -> None:
+        if min(self.lateral_refinement, self.axial_refinement) < 1:
+            raise InputError("refinements must be at least 1", "simulation")
+        if not 0 <= self.wavevector_jitter < np.inf:
+            raise InputError("wavevector_jitter must not be negative", "simulation")
+
+
+def simulate(
+    specimen: Specimen,
+    instrument: Instrument,
+    protocol: Protocol,
+    *,
+    options: SimulationOptions | None = None,
+    seed: int = 0,
+    progress: Progress | None = None,
+    path: Path | str | None = None,
+) -> Record:
+    """Measure a specimen: y_j(t) = a_j Σ_s φ_s(t) · detector(exp(i q_j·ρ) field(M_s exp(i k_j·r))).
+
+    φ_s(t) = exp(−i 2π (δ_s − δ_ref)·1e-6·f t − t/T2*_s) with f the Larmor frequency.
+
+    Parameters
+    ----------
+    seed
+        Of jitter and photon noise; the noise of a shot depends on the seed and its number alone.
+    progress
+        Called as progress(shots done, shots).
+    path
+        Where to write the record; in memory if None.
+
+    Returns
+    -------
+    The record. Its noise_sd is the instrument's at one average, also without photon noise.
+
+    Raises
+    ------
+    InputError
+        The specimen has no maps or does not span the view, a wavevector is beyond the gradient
+        limits, the memory limit would be passed, or the record cannot be written.
+    """
+    options = options or SimulationOptions()
+    protocol.check_reach(instrument)
+    scene = Scene.build(
+        specimen,
+        instrument,
+        protocol,
+        (options.axial_refinement, options.lateral_refinement),
+        options.wavevector_jitter,
+        seed,
+    )
+    _check_memory(scene, in_file=path is not None, limit=options.memory_limit_gib * 2**30)
+    images = species_images(scene, progress)
+    courses = _time_courses(specimen, instrument, protocol)
+    if isinstance(options.photon_noise, PoissonNoise):
+        _warn_if_not_linear(images, instrument.readout)
+    description = specimen.description_json()
+    measured = _measure(images, courses, instrument, protocol, options.photon_noise, seed)
+    noise_sd = instrument.field_noise
+    if path is None:
+        samples = np.stack(list(measured))
+        return Record.from_arrays(instrument, protocol, samples, description, noise_sd=noise_sd)
+    with RecordWriter(path, instrument, protocol, description, noise_sd) as writer:
+        for samples in measured:
+            writer.append(samples[None])
+    return Record.open(path)
+
+
+def _time_courses(
+    specimen: Specimen, instrument: Instrument, protocol: Protocol
+) -> NDArray[np.complex64]:
+    """φ_s(t), (times, species)."""
+    shift = np.array([s.shift_ppm for s in specimen.species]) - protocol.reference_shift_ppm
+    frequency = shift * 1e-6 * instrument.larmor_frequency
+    rate = 2j * np.pi * frequency + 1 / np.array([s.t2_star for s in specimen.species])
+    return np.exp(-protocol.sample_times[:, None] * rate).astype(np.complex64)
+
+
+def _measure(
+    images: Samples,
+    courses: NDArray[np.complex64],
+    instrument: Instrument,
+    protocol: Protocol,
+    noise: PhotonNoise,
+    seed: int,
+) -> Iterator[Samples]:
+    """Samples (times, cy, cx) of one shot after the other."""
+    for shot, image in enumerate(images):
+        field = np.tensordot(courses, image, 1)
+        generator = np.random.default_rng([seed, shot])
+        yield noise.samples(field, instrument.readout, int(protocol.averages[shot]), generator)
+
+
+def _warn_if_not_linear(images: Samples, readout: Readout) -> None:
+    """Say so if the field turns the sensor spins beyond their linear range."""
+    field = float(np.abs(images).sum(axis=1).max())
+    phase = field * photons.phase_per_field(readout.sensing_time, readout.efficiency)
+    if phase > LINEAR_PHASE:
+        warnings.warn(
+            f"the field turns the sensor by up to {phase:.2g} rad, beyond its linear range of "
+            f"{LINEAR_PHASE} rad; choose a shorter sensing_time_us or a lower polarisation",
+            InputWarning,
+            stacklevel=3,
+        )
+
+
+def _check_memory(scene: Scene, *, in_file: bool, limit: float) -> None:
+    """Refuse, before anything large is taken, what would pass the memory limit."""
+    plane = 8 * int(np.prod(scene.padded))
+    species, shots = len(scene.magnetisation), len(scene.protocol)
+    nodes = max(
+        sum(voxels.node_total(scene.sheet(axis), largest) for voxels, _ in scene.layers())
+        for axis, _, largest in scene.axes()
+    )
+    channels = int(np.prod(scene.instrument.detector.channels()))
+    held = species * (1 if in_file else 1 + len(scene.protocol.sample_times) / species * 2)
+    need = plane * (nodes + 12 + 5 * species) + 8 * shots * channels * held
+    if need > limit:
+        raise InputError(
+            f"needs {need / 2**30:.1f} GiB, the limit is {limit / 2**30:.1f} GiB",
+            "simulation",
+            "refine less, write the record to a file, or raise memory_limit_gib",
+        )

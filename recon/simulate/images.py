@@ -1,0 +1,100 @@
+"""What the channels see of each species: convolution, sensor gradient, blur, pixels."""
+
+from __future__ import annotations
+
+from collections.abc import Callable
+
+import numpy as np
+import scipy.fft
+from numpy.typing import NDArray
+
+from recon.instrument import Camera
+from recon.physics.optics import optical_transfer, pixel_footprint
+from recon.physics.real_space import VoxelResponse
+from recon.simulate.scene import Scene, Wavevectors
+
+Progress = Callable[[int, int], None]
+Samples = NDArray[np.complex64]
+
+
+def species_images(scene: Scene, progress: Progress | None) -> Samples:
+    """What each shot's channels see of each species at t = 0, (shots, species, cy, cx), tesla."""
+    channels = scene.instrument.detector.channels()
+    shots, species = len(scene.protocol), len(scene.magnetisation)
+    images = np.empty((shots, species, *channels), np.complex64)
+    detect = _detector(scene)
+    done = 0
+    for axis, members, largest in scene.axes():
+        sheet = scene.sheet(axis)
+        layers = [(voxels.response(sheet, largest), held) for voxels, held in scene.layers()]
+        waves, group = np.unique(scene.nuclear[members], axis=0, return_inverse=True)
+        for number, wave in enumerate(waves):
+            field = _field(scene, layers, wave)
+            for shot in members[group.reshape(-1) == number]:
+                factor = np.complex64(scene.protocol.amplitude[shot])
+                images[shot] = detect(field, scene.sensor[shot]) * factor
+                done += 1
+            if progress:
+                progress(done, shots)
+    return images
+
+
+def _field(
+    scene: Scene, layers: list[tuple[VoxelResponse, NDArray[np.float32]]], wave: Wavevectors
+) -> Samples:
+    """Field along the sensing axis at the places, (species, places y, x), by convolution."""
+    rows, columns = scene.padded
+    total = np.zeros((len(scene.magnetisation), rows, columns), np.complex64)
+    wound = np.exp(1j * wave[1] * scene.y)[:, None] * np.exp(1j * wave[0] * scene.x)
+    wound = wound.astype(np.complex64)
+    for response, content in layers:
+        spectrum = scipy.fft.fft(content * wound, columns, axis=-1, workers=2)
+        spectrum = scipy.fft.fft(spectrum, rows, axis=-2, workers=2)
+        spectrum *= response.spectrum(wave)
+        total += spectrum
+    where_y, where_x = (
+        np.arange(-m, p - m) for m, p in zip(scene.margin, scene.places, strict=True)
+    )
+    field = scipy.fft.ifft(total, axis=-2, workers=2, overwrite_x=True)[:, where_y]
+    field = scipy.fft.ifft(field, axis=-1, workers=2, overwrite_x=True)
+    return np.asarray(field[..., where_x])
+
+
+def _detector(scene: Scene) -> Callable[[Samples, Wavevectors], Samples]:
+    """The function (field at the places, q) → channels, (species, cy, cx)."""
+    (dy, dx), (ny, nx) = scene.grid.voxel[1:], scene.grid.shape[1:]
+    (my, mx), (py, px) = scene.margin, scene.places
+    y, x = scene.y[0] + np.arange(-my, py - my) * dy, scene.x[0] + np.arange(-mx, px - mx) * dx
+    cy, cx = scene.instrument.detector.channels()
+    transfer = _light_transfer(scene)
+
+    def detect(field: Samples, wave: Wavevectors) -> Samples:
+        wound_y, wound_x = (
+            np.exp(1j * k * place).astype(np.complex64) for k, place in ((wave[1], y), (wave[0], x))
+        )
+        light = field * (wound_y[:, None] * wound_x)
+        if transfer is not None:
+            light = scipy.fft.fft2(light, workers=2, overwrite_x=True)
+            light *= transfer
+            light = scipy.fft.ifft2(light, workers=2, overwrite_x=True)
+        view = light[:, my : my + ny, mx : mx + nx]
+        pixels = view.reshape(-1, cy, ny // cy, cx, nx // cx)
+        return np.asarray(pixels.mean(axis=(2, 4)))
+
+    return detect
+
+
+def _light_transfer(scene: Scene) -> NDArray[np.float32] | None:
+    """Optical blur and the mean over a fine voxel, on the places' lattice; None without camera."""
+    if not isinstance(scene.instrument.detector, Camera):
+        return None
+    wave_y, wave_x = (
+        2 * np.pi * scipy.fft.fftfreq(count, edge)
+        for count, edge in zip(scene.places, scene.grid.voxel[1:], strict=True)
+    )
+    optics = scene.instrument.optics
+    blur = optical_transfer(
+        np.hypot(wave_y[:, None], wave_x), optics.numerical_aperture, optics.wavelength
+    )
+    mean = pixel_footprint(wave_y[:, None], wave_x, (scene.grid.voxel[1], scene.grid.voxel[2]))
+    return np.asarray(blur * mean, np.float32)
