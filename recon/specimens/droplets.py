@@ -7,6 +7,7 @@ from dataclasses import dataclass
 import numpy as np
 from numpy.typing import NDArray
 from scipy.spatial import cKDTree
+from scipy.spatial.transform import Rotation
 
 from recon.grid import Grid
 
@@ -70,7 +71,11 @@ class Droplets:
 
 
 def ball_points(across: int) -> FloatArray:
-    """Cubic lattice points inside the unit ball, `across` along a diameter, (P, 3)."""
+    """Points evenly spread in the unit ball, `across` along a diameter, (P, 3).
+
+    A cubic lattice, turned so that none of its planes lies along a grid's.
+    """
     line = (np.arange(across) + 0.5) * 2 / across - 1
     cube = np.stack(np.meshgrid(line, line, line, indexing="ij"), axis=-1).reshape(-1, 3)
-    return np.asarray(cube[(cube**2).sum(axis=1) <= 1])
+    ball = cube[(cube**2).sum(axis=1) <= 1]
+    return np.asarray(Rotation.from_euler("zyx", (0.31, 0.47, 0.63)).apply(ball))

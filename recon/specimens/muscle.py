@@ -268,13 +268,13 @@ class Muscle:
         straight edge, droplets by their volume. Sub-voxels outside the section are empty.
         """
         heights, y, x = self.grid.sub_positions(refinement)
-        plane_y, plane_x = (axis.ravel() for axis in np.meshgrid(y, x, indexing="ij"))
+        plane_y, plane_x = np.meshgrid(y, x, indexing="ij")
+        near = self.outline.depth(plane_x, plane_y) > -12 * MICRON
         blur = 0.5 * (y[1] - y[0] + x[1] - x[0])
-        maps = np.empty((len(SPECIES), len(heights), len(y), len(x)), np.float32)
+        maps = np.zeros((len(SPECIES), len(heights), len(y), len(x)), np.float32)
         for level, z in enumerate(heights):
-            place = self.mosaic.locate(plane_x, plane_y, np.full(plane_x.shape, z))
-            mixture = self._mixture(place, blur)
-            maps[:, level] = mixture.reshape(len(SPECIES), len(y), len(x))
+            place = self.mosaic.locate(plane_x[near], plane_y[near], np.full(near.sum(), z))
+            maps[:, level, near] = self._mixture(place, blur)
         droplet = self.droplets.volume_fraction(self.grid, refinement)
         maps *= 1 - droplet
         maps[LIPID] += np.float32(DROPLET_MM) * droplet
