@@ -1,0 +1,1 @@
+"""Handing results over in open file formats."""
