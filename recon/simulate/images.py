@@ -66,17 +66,16 @@ def _detector(scene: Scene) -> Callable[[Samples, Wavevectors], Samples]:
     (my, mx), (py, px) = scene.margin, scene.places
     y, x = scene.y[0] + np.arange(-my, py - my) * dy, scene.x[0] + np.arange(-mx, px - mx) * dx
     cy, cx = scene.instrument.detector.channels()
-    transfer = _light_transfer(scene)
+    transfer, fading = _light_transfer(scene), _fading(scene)
 
     def detect(field: Samples, wave: Wavevectors) -> Samples:
         wound_y, wound_x = (
             np.exp(1j * k * place).astype(np.complex64) for k, place in ((wave[1], y), (wave[0], x))
         )
-        light = field * (wound_y[:, None] * wound_x)
-        if transfer is not None:
-            light = scipy.fft.fft2(light, workers=2, overwrite_x=True)
-            light *= transfer
-            light = scipy.fft.ifft2(light, workers=2, overwrite_x=True)
+        light = field * (wound_y[:, None] * wound_x * fading)
+        light = scipy.fft.fft2(light, workers=2, overwrite_x=True)
+        light *= transfer
+        light = scipy.fft.ifft2(light, workers=2, overwrite_x=True)
         view = light[:, my : my + ny, mx : mx + nx]
         pixels = view.reshape(-1, cy, ny // cy, cx, nx // cx)
         return np.asarray(pixels.mean(axis=(2, 4)))
@@ -84,17 +83,30 @@ def _detector(scene: Scene) -> Callable[[Samples, Wavevectors], Samples]:
     return detect
 
 
-def _light_transfer(scene: Scene) -> NDArray[np.float32] | None:
-    """Optical blur and the mean over a fine voxel, on the places' lattice; None without camera."""
-    if not isinstance(scene.instrument.detector, Camera):
-        return None
+def _fading(scene: Scene) -> NDArray[np.float32]:
+    """1 over the view and the inner half of its margin, then falling to 0, (places y, x).
+
+    So the transform that blurs the light meets no jump where the region wraps.
+    """
+    sides = []
+    for count, places, margin in zip(scene.grid.shape[1:], scene.places, scene.margin, strict=True):
+        centre = margin + (count - 1) / 2
+        beyond = np.abs(np.arange(places) - centre) - (count - 1) / 2
+        depth = np.clip((beyond - margin / 2) / max(margin / 2, 1), 0, 1)
+        sides.append(np.cos(np.pi / 2 * depth) ** 2)
+    return np.asarray(sides[0][:, None] * sides[1], np.float32)
+
+
+def _light_transfer(scene: Scene) -> NDArray[np.float32]:
+    """Mean over a fine voxel and, for a camera, optical blur, on the places' lattice (y, x)."""
     wave_y, wave_x = (
         2 * np.pi * scipy.fft.fftfreq(count, edge)
         for count, edge in zip(scene.places, scene.grid.voxel[1:], strict=True)
     )
-    optics = scene.instrument.optics
-    blur = optical_transfer(
-        np.hypot(wave_y[:, None], wave_x), optics.numerical_aperture, optics.wavelength
-    )
-    mean = pixel_footprint(wave_y[:, None], wave_x, (scene.grid.voxel[1], scene.grid.voxel[2]))
-    return np.asarray(blur * mean, np.float32)
+    _, edge_y, edge_x = scene.grid.voxel
+    transfer = pixel_footprint(wave_y[:, None], wave_x, (edge_y, edge_x))
+    if isinstance(scene.instrument.detector, Camera):
+        optics = scene.instrument.optics
+        wave = np.hypot(wave_y[:, None], wave_x)
+        transfer *= optical_transfer(wave, optics.numerical_aperture, optics.wavelength)
+    return np.asarray(transfer, np.float32)

@@ -21,8 +21,11 @@ from recon.specimen import Specimen
 
 Wavevectors = NDArray[np.float64]
 
-BLUR_REACH = 8
+BLUR_REACH = 16
 """How far the light beyond the view is followed, in units of λ/(2 NA)."""
+
+LEAST_MARGIN = 8
+"""Fine voxels of light beyond the view at least; in the outer half it fades to nothing."""
 
 
 @dataclass(frozen=True)
@@ -127,13 +130,12 @@ def _layout(
 ) -> tuple[tuple[int, int], tuple[int, int], tuple[int, int]]:
     """Margin beyond the view, number of places, and padded length, each along (y, x)."""
     _, *counts = grid.shape
-    margin = [0, 0]
-    places = list(counts)
+    reach = 0.0
     if isinstance(instrument.detector, Camera):
         optics = instrument.optics
         reach = BLUR_REACH * optics.wavelength / (2 * optics.numerical_aperture)
-        margin = [max(4, int(np.ceil(reach / edge))) for edge in grid.voxel[1:]]
-        places = [scipy.fft.next_fast_len(n + 2 * m) for n, m in zip(counts, margin, strict=True)]
+    margin = [max(LEAST_MARGIN, int(np.ceil(reach / edge))) for edge in grid.voxel[1:]]
+    places = [scipy.fft.next_fast_len(n + 2 * m) for n, m in zip(counts, margin, strict=True)]
     padded = [scipy.fft.next_fast_len(n + p - 1) for n, p in zip(counts, places, strict=True)]
     return (margin[0], margin[1]), (places[0], places[1]), (padded[0], padded[1])
 
