@@ -182,10 +182,11 @@ class VoxelResponse:
         ]
         factors = phases[0][:, None, None] * phases[1][:, None] * phases[2]
         factors *= np.exp(1j * wave[0] * self.height)
-        count = factors.size
-        flat = self.spectra.reshape(count, -1)
-        summed = factors.reshape(count).astype(np.complex64) @ flat
-        return np.asarray(summed.reshape(self.spectra.shape[3:]))
+        total = np.zeros(self.spectra.shape[3:], np.complex64)
+        part = np.empty_like(total)
+        for index in np.ndindex(factors.shape):  # a matrix product would wake idle threads
+            total += np.multiply(self.spectra[index], np.complex64(factors[index]), out=part)
+        return total
 
 
 def gauss_nodes(centre: float, half: float, count: int) -> tuple[FloatArray, FloatArray]:

@@ -25,7 +25,7 @@ from recon.errors import InputError, InputWarning
 from recon.instrument import Instrument, Readout
 from recon.physics import photons
 from recon.protocol import Protocol
-from recon.record import Record, RecordWriter
+from recon.record import Record, RecordWriter, samples_shape
 from recon.simulate.images import Progress, Samples, species_images
 from recon.simulate.noise import NoNoise, PhotonNoise, PoissonNoise
 from recon.simulate.scene import Scene
@@ -120,11 +120,13 @@ def simulate(
     measured = _measure(images, courses, instrument, protocol, options.photon_noise, seed)
     noise_sd = instrument.field_noise
     if path is None:
-        samples = np.stack(list(measured))
+        samples = np.empty(samples_shape(instrument, protocol), np.complex64)
+        for shot, of_shot in enumerate(measured):
+            samples[shot] = of_shot
         return Record.from_arrays(instrument, protocol, samples, description, noise_sd=noise_sd)
     with RecordWriter(path, instrument, protocol, description, noise_sd) as writer:
-        for samples in measured:
-            writer.append(samples[None])
+        for of_shot in measured:
+            writer.append(of_shot[None])
     return Record.open(path)
 
 
@@ -175,7 +177,7 @@ def _check_memory(scene: Scene, *, in_file: bool, limit: float) -> None:
         for axis, _, largest in scene.axes()
     )
     channels = int(np.prod(scene.instrument.detector.channels()))
-    held = species * (1 if in_file else 1 + len(scene.protocol.sample_times) / species * 2)
+    held = species + (0 if in_file else len(scene.protocol.sample_times))
     need = plane * (nodes + 12 + 5 * species) + 8 * shots * channels * held
     if need > limit:
         raise InputError(
