@@ -37,18 +37,39 @@ from difflib import get_close_matches
 from functools import cache
 from pathlib import Path
 from types import MappingProxyType
-from typing import Annotated, Literal, Self
+from typing import Annotated, Literal, Self, TypeVar
 
 import numpy as np
 from numpy.typing import NDArray
-from pydantic import Field, model_validator
+from pydantic import AfterValidator, Field, model_validator
 
 from recon.errors import InputError
 from recon.physics.spins import LineList, SpinSystem, line_list
 from recon.toml import Count, Description, Number
 
-Name = Annotated[str, Field(min_length=1, max_length=60, pattern=r"^[^\s/](.*[^\s/])?$")]
-Text = Annotated[str, Field(min_length=1, pattern=r"\S")]
+Item = TypeVar("Item")
+
+
+def _plain_name(name: str) -> str:
+    if not name or "/" in name or name != name.strip() or not name.isprintable():
+        raise ValueError("must be one printable line without '/' or outer blanks")
+    return name
+
+
+def _not_blank(text: str) -> str:
+    if not text.strip():
+        raise ValueError("must not be blank")
+    return text
+
+
+def _not_empty(items: tuple[Item, ...]) -> tuple[Item, ...]:
+    if not items:
+        raise ValueError("needs at least one entry")
+    return items
+
+
+Name = Annotated[str, AfterValidator(_plain_name)]
+Text = Annotated[str, AfterValidator(_not_blank)]
 Positive = Annotated[Number, Field(gt=0)]
 PositiveCount = Annotated[Count, Field(ge=1)]
 Celsius = Annotated[Number, Field(gt=-273.15)]
@@ -91,7 +112,7 @@ class SpinGroup(Description):
 
     name: Name
     copies: PositiveCount = 1
-    spins: Annotated[tuple[SpinRow, ...], Field(min_length=1)]
+    spins: Annotated[tuple[SpinRow, ...], AfterValidator(_not_empty)]
     couplings: tuple[CouplingRow, ...] = ()
 
     @model_validator(mode="after")
@@ -156,7 +177,7 @@ class SpinSpecies(Description):
     notes: str = ""
     sources: dict[str, Text]
     diffusion: Diffusion
-    groups: Annotated[tuple[SpinGroup, ...], Field(min_length=1)]
+    groups: Annotated[tuple[SpinGroup, ...], AfterValidator(_not_empty)]
 
     @model_validator(mode="after")
     def _names_and_sources(self) -> Self:

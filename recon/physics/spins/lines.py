@@ -6,6 +6,7 @@ from collections.abc import Sequence
 from dataclasses import dataclass
 
 import numpy as np
+import scipy.fft
 from numpy.typing import ArrayLike, NDArray
 
 from recon.errors import InputError
@@ -19,8 +20,11 @@ ComplexArray = NDArray[np.complex128]
 SAME_LINE_HZ = 1e-6
 """Lines this close on the frequency axis, with equal decay, are one line."""
 
-CHUNK = 2048
-"""Lines evaluated at a time: bounds the memory of a time signal."""
+FEW_LINES = 64
+"""Lines summed directly at a time; only longer lists are worth Fourier transforms."""
+
+TAYLOR_ORDERS = 18
+"""Orders of the series within a bin of radius π/√8 = 1.11: 1.11^18/18! is 1e-15."""
 
 
 @dataclass(frozen=True, eq=False)
@@ -98,7 +102,9 @@ def line_list(
     itself, each combination of composite spins by itself, each block of conserved Fz by itself.
     Couplings to unlike nuclei are weak (IzSz); all others keep their flip-flop terms.
 
-    MEASURED
+    Measured on one server core, every spin coupled to every other and none equivalent: 8 spins
+    0.05 s, 10 spins 0.3 s and 40 MB, 12 spins 4 s and 0.45 GB (2.2 million lines; three times as
+    long with a decay time for each spin). Equivalent spins cost far less.
 
     Parameters
     ----------
@@ -143,65 +149,91 @@ def _group_lines(group: SpinSystem, frequencies: FloatArray, dropped_fraction: f
         for frequency, strength, rate in transitions(
             group, twice_spin, frequencies, dropped_fraction
         ):
-            parts.append(LineList(frequency, strength * weight, rate).merged())
+            parts.append(LineList(frequency, strength * weight, rate))
     return LineList.joined(parts)
 
 
 def time_signal(lines: LineList, times: ArrayLike, t2_star: float = np.inf) -> ComplexArray:
     """s(t) = exp(−t/T2*) Σ_l a_l exp(−i 2π f_l t − r_l t), (T,), complex128.
 
-    Even times t = t0 + (pB + q) Δt split every exponential into a factor of p and one of q, so the
-    sum is one matrix product of (T/B, L) with (L, B), B ≈ √T: exact, and fast for the thousands of
-    lines that occur here. Other times are summed directly.
+    Evenly spaced times are summed by Fourier transforms, right to 1e-12 of Σ a; others directly.
 
     Parameters
     ----------
     times
-        Sample times, (T,), seconds; any order, best evenly spaced.
+        Sample times, (T,), seconds, not negative; any order, best evenly spaced.
     t2_star
         Common transverse decay time on top of the lines' own decay, seconds; may be infinite.
 
     Raises
     ------
     InputError
-        Times that are not finite, or a decay time that is not positive.
+        Times that are negative or not finite, or a decay time that is not positive.
     """
     seconds = np.atleast_1d(np.asarray(times, dtype=np.float64))
-    if seconds.ndim != 1 or not np.isfinite(seconds).all():
-        raise InputError("must be one row of finite seconds", "sample times")
+    if seconds.ndim != 1 or not (np.isfinite(seconds).all() and (seconds >= 0).all()):
+        raise InputError("must be one row of finite seconds, none negative", "sample times")
     if not t2_star > 0:
         raise InputError(f"{t2_star} s must be positive", "T2*")
-    blocks, width = _even_blocks(seconds)
-    step = (seconds[-1] - seconds[0]) / (len(seconds) - 1) if width > 1 else 0.0
-    signal = np.zeros((blocks, width), dtype=np.complex128)
-    for start in range(0, len(lines), CHUNK):
-        part = slice(start, start + CHUNK)
-        rate = -2j * np.pi * lines.frequencies[part] - lines.decay_rates[part]
-        if width > 1:
-            left = _powers(np.exp(rate * (step * width)), blocks)
-            left *= lines.intensities[part] * np.exp(rate * seconds[0])
-        else:
-            left = np.exp(np.multiply.outer(seconds, rate)) * lines.intensities[part]
-        signal += left @ _powers(np.exp(rate * step), width).T
-    return np.asarray(signal.ravel()[: len(seconds)] * np.exp(-seconds / t2_star))
+    rates = np.asarray(-2j * np.pi * lines.frequencies - lines.decay_rates, dtype=np.complex128)
+    if len(lines) < FEW_LINES or not _even(seconds):
+        signal = _direct_sum(lines.intensities, rates, seconds)
+    else:
+        dwell = (seconds[-1] - seconds[0]) / (len(seconds) - 1)
+        amplitudes = lines.intensities * np.exp(rates * seconds[0])
+        signal = _transformed_sum(amplitudes, rates * dwell, len(seconds))
+    return np.asarray(signal * np.exp(-seconds / t2_star))
 
 
-def _even_blocks(seconds: FloatArray) -> tuple[int, int]:
-    """Blocks and samples per block, near √T each, if the times are even; else (T, 1)."""
+def _even(seconds: FloatArray) -> bool:
     steps = np.diff(seconds)
-    if len(seconds) < 4 or not np.allclose(steps, steps.mean(), rtol=1e-9, atol=0):
-        return len(seconds), 1
-    width = int(np.ceil(np.sqrt(len(seconds))))
-    return -(-len(seconds) // width), width
+    return len(seconds) > 3 and steps[0] > 0 and np.allclose(steps, steps.mean(), rtol=1e-9, atol=0)
 
 
-def _powers(base: ComplexArray, count: int) -> ComplexArray:
-    """base^0 ... base^(count − 1), (count, L), by doubling: log2(count) roundings at most."""
-    powers = np.empty((count, len(base)), dtype=np.complex128)
-    powers[0] = 1.0
-    done, step = 1, base
-    while done < count:
-        more = min(done, count - done)
-        np.multiply(powers[:more], step, out=powers[done : done + more])
-        done, step = done + more, step * step
-    return powers
+def _direct_sum(amplitudes: FloatArray, rates: ComplexArray, seconds: FloatArray) -> ComplexArray:
+    signal = np.zeros(len(seconds), dtype=np.complex128)
+    for start in range(0, len(rates), FEW_LINES):
+        part = slice(start, start + FEW_LINES)
+        signal += np.exp(np.multiply.outer(seconds, rates[part])) @ amplitudes[part]
+    return signal
+
+
+def _transformed_sum(amplitudes: ComplexArray, exponents: ComplexArray, count: int) -> ComplexArray:
+    """Σ_l a_l exp(x_l m), m = 0 ... count − 1, (count,), x per sample.
+
+    Lines are gathered in bins about the points c of a Fourier lattice twice as fine as the samples
+    ask for (and of a lattice of decay rates, likewise). Within a bin exp((x − c) m) is a Taylor
+    series about the middle sample; |x − c| times the samples to either end is at most π/4 along
+    either lattice, and each order needs one transform.
+    """
+    size = scipy.fft.next_fast_len(2 * count)
+    turn = np.round(-exponents.imag * size / (2 * np.pi))
+    decay = np.round(-exponents.real * count / np.pi)
+    offset = exponents + 2j * np.pi / size * turn + np.pi / count * decay
+    middle = (count - 1) / 2
+    weight = amplitudes * np.exp(offset * middle)
+    place = turn.astype(np.int64) % size
+    sample = np.arange(count)
+    total = np.zeros(count, dtype=np.complex128)
+    for rate in np.unique(decay):
+        chosen = decay == rate
+        series = _taylor_series(
+            weight[chosen], offset[chosen] * count / 2, place[chosen], size, count
+        )
+        total += series * np.exp(-np.pi / count * rate * sample)
+    return total
+
+
+def _taylor_series(
+    weight: ComplexArray, offset: ComplexArray, place: NDArray[np.int64], size: int, count: int
+) -> ComplexArray:
+    """Σ_p u^p / p! · Fourier transform of Σ weight · offset^p in each bin, u from −1 to 1."""
+    u = (2 * np.arange(count) - (count - 1)) / count
+    total = np.zeros(count, dtype=np.complex128)
+    factor = np.ones(count)
+    for order in range(TAYLOR_ORDERS):
+        bins = np.bincount(place, weight.real, size) + 1j * np.bincount(place, weight.imag, size)
+        total += factor * scipy.fft.fft(bins)[:count]
+        weight = weight * offset / (order + 1)
+        factor *= u
+    return total
