@@ -1,0 +1,22 @@
+"""Everything that draws: one file per kind of picture, one style for all.
+
+Functions take arrays and a grid and give a matplotlib figure; `save` writes it.
+"""
+
+from recon.figures.history import Progress, history
+from recon.figures.maps import comparison, overview
+from recon.figures.protocol_coverage import coverage
+from recon.figures.sensitivity import sensitivity
+from recon.figures.spectrum import spectrum
+from recon.figures.style import save
+
+__all__ = [
+    "Progress",
+    "comparison",
+    "coverage",
+    "history",
+    "overview",
+    "save",
+    "sensitivity",
+    "spectrum",
+]

@@ -104,9 +104,8 @@ def _checked(
                 f"give real maps of shape {grid.shape}",
             )
     if depths is None:
-        count = min(3, grid.shape[0])
-        spread = np.linspace(0, grid.shape[0] - 1, 2 * count + 1)[1::2] if count > 1 else [0]
-        depths = [round(float(level)) for level in spread]
+        slices, count = grid.shape[0], min(3, grid.shape[0])
+        depths = [((2 * row + 1) * slices - 1) // (2 * count) for row in range(count)]
     beyond = [level for level in depths if not 0 <= level < grid.shape[0]]
     if beyond or not depths:
         raise InputError(f"slice {beyond or 'none'} of {grid.shape[0]} cannot be drawn", "figure")
@@ -148,7 +147,7 @@ def _panels(rows: int, groups: tuple[int, int], grid: Grid) -> tuple[Figure, NDA
     left, right, bottom, top = style.extent_um(grid)
     aspect = (top - bottom) / (right - left)
     panel = min(style.PANEL_LIMIT, (style.PAGE_WIDTH - 0.35) / count)
-    figure = style.new_figure(panel * count + 0.35, rows * panel * aspect + 1.0)
+    figure = style.new_figure(panel * count + 0.35, rows * panel * aspect + 1.1)
     axes: NDArray[Any] = figure.subplots(rows, count, squeeze=False)
     return figure, axes
 
@@ -207,4 +206,4 @@ def _colour_bar(figure: Figure, images: list[Any], panels: NDArray[Any], label: 
         shrink=0.9 if len(panels) == 1 else 0.7,
     )
     bar.outline.set_visible(False)
-    bar.ax.locator_params(nbins=4)
+    bar.ax.locator_params(nbins=3 if len(panels) == 1 else 5)

@@ -83,7 +83,7 @@ def new_figure(width: float, height: float) -> Figure:
     """An empty figure of a size in inches, bound to no window and to no global state."""
     figure = Figure(figsize=(width, height), layout="constrained")
     FigureCanvasAgg(figure)
-    figure.get_layout_engine().set(w_pad=0.03, h_pad=0.03, wspace=0.02, hspace=0.02)  # type: ignore[union-attr, call-arg]
+    figure.get_layout_engine().set(w_pad=0.04, h_pad=0.06, wspace=0.02, hspace=0.02)  # type: ignore[union-attr, call-arg]
     return figure
 
 
@@ -189,11 +189,11 @@ def scale_bar(axes: Axes, label: bool = True) -> None:
     )
     if label:
         axes.text(
-            start + length / 2,
+            start,
             base + 0.03 * height,
             f"{length:g} µm",
             color="white",
-            ha="center",
+            ha="left",
             va="bottom",
             fontsize=9,
             path_effects=[patheffects.withStroke(linewidth=2.0, foreground="black")],
