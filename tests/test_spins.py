@@ -274,6 +274,13 @@ def test_phosphorus_splits_equally_at_any_field():
         np.testing.assert_allclose(found.intensities, [4.5, 4.5], rtol=1e-9)
 
 
+def test_groups_without_a_proton_are_not_seen():
+    spins = system([2.0, 0.0, 5.0], {(1, 2): 18.0}, nuclei=("1H", "31P", "31P"))
+    found = lines_of(spins)
+    np.testing.assert_allclose(found.frequencies, [2.0])
+    assert found.total == spins.protons == 1
+
+
 def test_coupling_to_unlike_nuclei_is_weak_or_said_to_be_doubtful():
     spins = system([0.0, 0.0], {(0, 1): 90.0}, nuclei=("1H", "15N"))
     with pytest.warns(InputWarning, match=r"H0, H1.*90 Hz.*weak"):

@@ -121,6 +121,20 @@ def line_list(
     InputError
         A negative or infinite frequency, a fraction outside [0, 1), unlike nuclei at zero field.
     """
+    _check_request(larmor_frequency, reference_shift_ppm, dropped_fraction)
+    system.check_weak_coupling(larmor_frequency)
+    frequencies = system.frequencies(larmor_frequency, reference_shift_ppm)
+    groups = [group for group in system.coupled_groups() if system.observed(group)]
+    parts = [
+        _group_lines(system.part(group), frequencies[group], dropped_fraction / 2)
+        for group in groups
+    ]
+    return LineList.joined(parts).pruned(dropped_fraction / 2)
+
+
+def _check_request(
+    larmor_frequency: float, reference_shift_ppm: float, dropped_fraction: float
+) -> None:
     if not (0 <= larmor_frequency < np.inf and np.isfinite(reference_shift_ppm)):
         raise InputError(
             f"Larmor frequency {larmor_frequency} Hz and reference {reference_shift_ppm} ppm "
@@ -129,14 +143,6 @@ def line_list(
         )
     if not 0 <= dropped_fraction < 1:
         raise InputError(f"dropped fraction {dropped_fraction} must be in [0, 1)", "spectrum")
-    system.check_weak_coupling(larmor_frequency)
-    frequencies = system.frequencies(larmor_frequency, reference_shift_ppm)
-    parts = []
-    for group in system.coupled_groups():
-        part = system.part(group)
-        if part.protons:
-            parts.append(_group_lines(part, frequencies[group], dropped_fraction / 2))
-    return LineList.joined(parts).pruned(dropped_fraction / 2)
 
 
 def _group_lines(group: SpinSystem, frequencies: FloatArray, dropped_fraction: float) -> LineList:

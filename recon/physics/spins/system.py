@@ -117,6 +117,10 @@ class SpinSystem:
         """Indices of spins that couplings of any kind hold together, one list per group."""
         return _components(self.couplings)
 
+    def observed(self, spins: list[int]) -> bool:
+        """Whether there is a proton among some spins."""
+        return any(self.nuclei[k] == PROTON for k in spins)
+
     def part(self, spins: list[int]) -> SpinSystem:
         """The system of some spins only, couplings to the others left out."""
         return SpinSystem(
