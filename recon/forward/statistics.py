@@ -1,0 +1,157 @@
+"""What a record has to say about the object, in one pass and bounded memory.
+
+For Gaussian noise the record enters the estimate only through
+
+    b = Aᴴ W y,   G = Aᴴ W A,   ‖W^{1/2} y‖²,   the number of samples,
+
+and all four add over shots. Statistics of separate shots can therefore be added as shots
+arrive, or summed over workers.
+"""
+
+from __future__ import annotations
+
+from collections.abc import Callable, Iterable, Iterator
+from dataclasses import dataclass
+
+import numpy as np
+from numpy.typing import NDArray
+
+from recon.errors import InputError
+from recon.forward.layout import Layout
+from recon.forward.model import ForwardModel
+from recon.forward.operator import ForwardOperator
+from recon.grid import Grid
+
+ComplexArray = NDArray[np.complexfloating]
+
+
+@dataclass(frozen=True)
+class Statistics:
+    """Sufficient statistics of one or more shots.
+
+    Attributes
+    ----------
+    linear
+        FFT of b over the lateral axes, (components, nz, ny, nx).
+    normal
+        Blocks of G for a single component of unit time course, one block per coset of object
+        frequencies: (q, q, blocks y, blocks x) in the order of `layout`.
+    gram
+        Spectral Gram matrix Φᴴ Φ, (components, components).
+    energy
+        ‖W^{1/2} y‖², dimensionless.
+    samples
+        Number of complex samples.
+    """
+
+    grid: Grid
+    layout: Layout
+    linear: ComplexArray
+    normal: ComplexArray
+    gram: ComplexArray
+    energy: float
+    samples: int
+
+    def __add__(self, other: Statistics) -> Statistics:
+        """Statistics of both sets of shots together."""
+        same = self.grid == other.grid and self.layout == other.layout
+        if not same or not np.allclose(self.gram, other.gram):
+            raise InputError(
+                "statistics of different grids or sample times cannot be added", "record"
+            )
+        return Statistics(
+            self.grid,
+            self.layout,
+            self.linear + other.linear,
+            self.normal + other.normal,
+            self.gram,
+            self.energy + other.energy,
+            self.samples + other.samples,
+        )
+
+
+def accumulate(
+    model: ForwardModel,
+    batches: Iterable[tuple[slice, ComplexArray]],
+    progress: Callable[[int], None] | None = None,
+) -> Statistics:
+    """Read a record once.
+
+    Parameters
+    ----------
+    batches
+        Pairs (shots, samples (n, times, channels y, channels x)), in any order, each shot once.
+    progress
+        Called with the number of shots done so far.
+
+    Raises
+    ------
+    InputError
+        A sample is NaN or infinite, or a batch has the wrong shape.
+    """
+    operator = ForwardOperator(model, np.complex64)
+    weight = model.encoding.weight
+    energy, done = 0.0, 0
+
+    def shots() -> Iterator[tuple[int, ComplexArray]]:
+        nonlocal energy, done
+        for where, samples in batches:
+            if samples.shape[1:] != operator.sample_shape[1:]:
+                raise InputError(
+                    f"samples per shot have shape {samples.shape[1:]}, not {operator.sample_shape[1:]}",
+                    f"shots {where.start} to {where.stop - 1}",
+                )
+            for offset, one in enumerate(samples):
+                shot = where.start + offset
+                one = np.ascontiguousarray(one, np.complex64)
+                part = np.linalg.norm(one.ravel().view(np.float32)) ** 2
+                if not np.isfinite(part):
+                    raise InputError(
+                        "NaN or infinite sample", f"shot {shot}", "drop or mend the shot"
+                    )
+                energy += float(part) * weight[shot]
+                yield shot, one * np.float32(weight[shot])
+                done += 1
+            if progress is not None:
+                progress(done)
+
+    linear = operator.back_project(shots())
+    layout, normal = normal_blocks(operator)
+    gram = model.basis.conj().T @ model.basis
+    return Statistics(model.grid, layout, linear, normal, gram, energy, model.sample_count)
+
+
+def normal_blocks(operator: ForwardOperator) -> tuple[Layout, ComplexArray]:
+    """Blocks of G = Σ_j w_j h_j h_jᴴ for a unit time course, before any data exist.
+
+    Returns the layout and (q, q, blocks y, blocks x) complex64, the matrix of ⟨row|G|column⟩.
+    """
+    model = operator.model
+    layout = Layout.of(model.grid.shape, (1, 1) if model.is_one_detector else model.binning)
+    q = layout.block_size
+    normal = np.zeros((q, q, *layout.blocks), np.complex64)
+    gain = np.prod(model.channels) / np.prod(model.grid.shape[1:])
+    if model.is_one_detector:
+        _add_detector_blocks(operator, float(gain), normal)
+    else:
+        work = np.empty((q, *layout.blocks), np.complex64)
+        for shot, weight in enumerate(model.encoding.weight):
+            response = layout.gather(operator.response(shot)[None])
+            response *= np.sqrt(gain * weight).astype(np.float32)
+            conjugate = response.conj()
+            for row in range(q):
+                part = np.multiply(conjugate[row], response[row:], out=work[row:])
+                normal[row, row:] += part
+    for row in range(q):
+        normal[row + 1 :, row] = normal[row, row + 1 :].conj()
+    return layout, normal
+
+
+def _add_detector_blocks(operator: ForwardOperator, gain: float, normal: ComplexArray) -> None:
+    """Rank-one updates at the single object frequency of each shot."""
+    encoding = operator.model.encoding
+    _, ny, nx = operator.model.grid.shape
+    for shot, weight in enumerate(encoding.weight):
+        values, row, column = operator.detector_response(shot)
+        values = values * np.sqrt(gain * weight)
+        normal[:, :, row % ny, column % nx] += np.triu(np.outer(values.conj(), values))
