@@ -6,7 +6,7 @@ import numpy as np
 import pytest
 
 from recon.forward import BlockQuadratic, ForwardOperator, accumulate
-from recon.forward.blocks import Symbol
+from recon.symbol import Symbol
 from tests.cases import NOISE, registry
 from tests.dense import dense_matrix
 

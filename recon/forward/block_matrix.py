@@ -37,6 +37,11 @@ class BlockMatrix:
         """(groups, q, q, blocks)."""
         return self._entries if self._columnwise else self._entries.transpose(0, 2, 3, 1)
 
+    @property
+    def per_block(self) -> ComplexArray:
+        """(groups, blocks, q, q)."""
+        return self._entries.transpose(0, 3, 1, 2) if self._columnwise else self._entries
+
     def multiply(self, vectors: ComplexArray) -> ComplexArray:
         """Matrix times vectors (groups, batch, q, blocks)."""
         if not self._columnwise:
@@ -52,8 +57,11 @@ class BlockMatrix:
 
     def inverse(self) -> BlockMatrix:
         """The inverse of every matrix."""
-        per_block = self.entries.transpose(0, 3, 1, 2)
-        return BlockMatrix(np.linalg.inv(per_block).transpose(0, 2, 3, 1), self.batch)
+        return BlockMatrix(np.linalg.inv(self.per_block).transpose(0, 2, 3, 1), self.batch)
+
+    def factor(self) -> BlockMatrix:
+        """Lower Cholesky factors L with L Lᴴ the matrix."""
+        return BlockMatrix(np.linalg.cholesky(self.per_block).transpose(0, 2, 3, 1), self.batch)
 
     def shifted(
         self, diagonal: FloatArray | float, coupling: FloatArray | None = None
@@ -68,5 +76,5 @@ class BlockMatrix:
 
     def eigen(self) -> tuple[FloatArray, ComplexArray]:
         """Eigenvalues (groups, blocks, q) ascending and eigenvectors (groups, blocks, q, q)."""
-        values, vectors = np.linalg.eigh(self.entries.transpose(0, 3, 1, 2))
+        values, vectors = np.linalg.eigh(self.per_block)
         return values, vectors

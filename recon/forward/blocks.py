@@ -14,7 +14,7 @@ small solve: the exact quadratic step.
 from __future__ import annotations
 
 from collections.abc import Callable
-from dataclasses import dataclass
+from copy import copy
 from functools import cached_property
 
 import numpy as np
@@ -23,35 +23,11 @@ from numpy.typing import NDArray
 
 from recon.forward.block_matrix import BlockMatrix
 from recon.forward.statistics import Statistics
+from recon.symbol import Symbol
 
 Array = NDArray[np.inexact]
 ComplexArray = NDArray[np.complexfloating]
 FloatArray = NDArray[np.floating]
-
-
-@dataclass(frozen=True)
-class Symbol:
-    """DᴴD = lateral(κ') ⊗ 1 + 1 ⊗ axial, the same for every component.
-
-    Attributes
-    ----------
-    lateral
-        (ny, nx) in FFT order, or a scalar.
-    axial
-        (nz, nz) symmetric, or None.
-    """
-
-    lateral: FloatArray | float
-    axial: FloatArray | None = None
-
-    def __add__(self, other: Symbol) -> Symbol:
-        axial = self.axial if other.axial is None else other.axial
-        if self.axial is not None and other.axial is not None:
-            axial = self.axial + other.axial
-        return Symbol(self.lateral + other.lateral, axial)
-
-    def scaled(self, factor: float) -> Symbol:
-        return Symbol(self.lateral * factor, None if self.axial is None else self.axial * factor)
 
 
 class BlockQuadratic:
@@ -83,6 +59,12 @@ class BlockQuadratic:
         b = scipy.fft.ifft2(self.statistics.linear)
         return np.ascontiguousarray(b.real) if self.real else b  # type: ignore[no-any-return]
 
+    def with_linear(self, b: Array) -> BlockQuadratic:
+        """The same blocks with another b (the energy stays that of the record)."""
+        other = copy(self)
+        other.__dict__["linear"] = b
+        return other
+
     @property
     def energy(self) -> float:
         """‖W^{1/2} y‖²."""
@@ -109,6 +91,29 @@ class BlockQuadratic:
         """The map r ↦ (G + symbol)⁻¹ r."""
         inverse = self.matrix.shifted(*self._spread(symbol)).inverse()
         return lambda right: self.filtered(inverse, right)
+
+    def scaled(self, unit: FloatArray) -> BlockQuadratic:
+        """The data term for unknowns counted in units of size `unit`, (components,)."""
+        return BlockQuadratic(self.statistics.scaled(unit), self.real)
+
+    @cached_property
+    def _root(self) -> BlockMatrix:
+        """Cholesky factors of the blocks, with a jitter at the rounding level."""
+        jitter = 1e-6 * float(np.einsum("gaab->", self.matrix.entries).real)
+        jitter /= self.matrix.groups * self.matrix.size * self.matrix.blocks
+        return self.matrix.shifted(max(jitter, 1e-30)).factor()
+
+    def noise(self, random: np.random.Generator) -> Array:
+        """A draw of Aᴴ W n, the noise of b for a record's noise n of the stated variance.
+
+        Its covariance is G for a complex unknown and ½ G for a real one.
+        """
+        white = random.standard_normal(self.shape, np.float32)
+        if self.real:
+            return self.filtered(self._root, white * np.float32(np.sqrt(0.5)))
+        imaginary = random.standard_normal(self.shape, np.float32)
+        white = ((white + 1j * imaginary) * np.float32(np.sqrt(0.5))).astype(np.complex64)
+        return self.filtered(self._root, white)
 
     @cached_property
     def spectrum(self) -> tuple[FloatArray, ComplexArray]:
@@ -156,6 +161,19 @@ class BlockQuadratic:
         if self._half:
             weights[:, 1 : (self.shape[-1] + 1) // 2] = 2
         return weights.ravel()
+
+    def plane_mean(self, per_block: ComplexArray) -> FloatArray:
+        """Mean over each plane of the diagonal of a block operator, (components, nz).
+
+        Takes matrices (groups, blocks, q, q), such as a covariance.
+        """
+        weights = self.half_weights()
+        diagonal = np.einsum("gkqq,k->gq", per_block.real, weights / weights.sum())
+        aliases = int(np.prod(self.layout.aliases))
+        mean = diagonal.reshape(len(diagonal), -1, aliases, self.shape[1]).mean(axis=2)
+        if self._mix is not None:
+            return np.abs(self._mix) ** 2 @ mean[:, 0]  # type: ignore[no-any-return]
+        return np.broadcast_to(mean[0], self.shape[:2])
 
     def _assemble(self) -> tuple[ComplexArray | None, BlockMatrix]:
         """Choose how components are uncoupled; return the mixing matrix and the blocks."""

@@ -11,7 +11,7 @@ arrive, or summed over workers.
 from __future__ import annotations
 
 from collections.abc import Callable, Iterable, Iterator
-from dataclasses import dataclass
+from dataclasses import dataclass, replace
 
 import numpy as np
 from numpy.typing import NDArray
@@ -23,6 +23,7 @@ from recon.forward.operator import ForwardOperator
 from recon.grid import Grid
 
 ComplexArray = NDArray[np.complexfloating]
+FloatArray = NDArray[np.floating]
 
 
 @dataclass(frozen=True)
@@ -68,6 +69,26 @@ class Statistics:
             self.energy + other.energy,
             self.samples + other.samples,
         )
+
+    def scaled(self, unit: FloatArray) -> Statistics:
+        """Statistics for unknowns counted in units of size `unit`, (components,)."""
+        factor = np.asarray(unit, float)
+        linear = self.linear * factor[:, None, None, None].astype(np.float32)
+        return replace(self, linear=linear, gram=self.gram * np.outer(factor, factor))
+
+    def projected(self, vectors: ComplexArray) -> Statistics:
+        """Statistics for unknowns x = V u with orthonormal columns V (components, fewer).
+
+        The energy stays that of the whole record.
+        """
+        linear = np.tensordot(vectors.conj().T.astype(np.complex64), self.linear, 1)
+        return replace(self, linear=linear, gram=vectors.conj().T @ self.gram @ vectors)
+
+    def sensitivity(self) -> FloatArray:
+        """Square root of the mean diagonal of G per component: signal-to-noise of one unit."""
+        q = len(self.normal)
+        mean = float(np.einsum("aayx->", self.normal).real) / (q * np.prod(self.layout.blocks))
+        return np.sqrt(np.diag(self.gram).real * mean)  # type: ignore[no-any-return]
 
 
 def accumulate(

@@ -1,0 +1,123 @@
+"""From a record to maps or a cube."""
+
+from __future__ import annotations
+
+import importlib.metadata
+from datetime import UTC, datetime
+from typing import Any
+
+import numpy as np
+
+from recon.errors import InputError
+from recon.forward import BlockQuadratic, ForwardModel, Statistics, accumulate
+from recon.priors import Frame, NonNegative, TotalVariation
+from recon.record import Record
+from recon.result import Account, Result
+from recon.solvers.estimate import Estimator, Progress, silent
+from recon.solvers.penalised import Penalised
+from recon.unknown import SpeciesAmounts, Unknown
+
+
+def default_estimator(unknown: Unknown) -> Estimator:
+    """Total variation; amounts are also non-negative. The weight chooses itself."""
+    if unknown.real:
+        return Penalised((TotalVariation(), NonNegative()))
+    return Penalised((TotalVariation(joint=True),))
+
+
+def reconstruct(
+    record: Record,
+    unknown: Unknown | None = None,
+    estimator: Estimator | None = None,
+    *,
+    progress: Progress = silent,
+    memory_limit_gib: float = 8.0,
+) -> Result:
+    """Reconstruct a record on its specimen's grid.
+
+    Minimises ½‖W^{1/2}(y − A x)‖² plus what the estimator assumes.
+
+    Parameters
+    ----------
+    unknown
+        `SpeciesAmounts()` (default) or `ComplexCube()`.
+    estimator
+        `Ridge()` or `Penalised(...)`; by default total variation.
+    progress
+        Called with what is being done and its share done.
+    memory_limit_gib
+        The work is refused if it would need more.
+
+    Raises
+    ------
+    InputError
+        The record does not fit its grid, is blind to a species, or memory would not suffice.
+    """
+    unknown = unknown or SpeciesAmounts()
+    estimator = estimator or default_estimator(unknown)
+    need = estimate_memory(record, unknown)
+    if need > memory_limit_gib * 2**30:
+        raise InputError(
+            f"needs about {need / 2**30:.1f} GiB, the limit is {memory_limit_gib:g} GiB",
+            "reconstruction",
+            "raise the limit, or use fewer voxels or species",
+        )
+    statistics, expand = unknown.compressed(read_statistics(record, unknown, progress))
+    sensitivity = statistics.sensitivity()
+    if not (sensitivity > 1e-6 * sensitivity.max()).all() or sensitivity.max() == 0:
+        raise InputError(
+            f"the record is blind to component {int(np.argmin(sensitivity)) + 1}",
+            "protocol",
+            "check sensing axes, gradients and sample times",
+        )
+    unit = 1 / sensitivity
+    quadratic = BlockQuadratic(statistics.scaled(unit), unknown.real)
+    frame = Frame(quadratic.shape, statistics.grid.voxel, unit)
+    estimate = estimator.estimate(quadratic, frame, progress).in_units(unit)
+    account = Account(
+        prior=str(estimator),
+        weights=estimate.weights,
+        why_stopped=estimate.reason.value,
+        misfit=estimate.misfit,
+        provenance=provenance(record, estimator),
+        remarks=estimate.remarks,
+    )
+    return unknown.result(record, estimate, expand, account)
+
+
+def read_statistics(record: Record, unknown: Unknown, progress: Progress = silent) -> Statistics:
+    """One pass over the record: b, G, energy."""
+    basis = unknown.basis(record)
+    model = ForwardModel.build(
+        record.specimen.grid, record.instrument, record.protocol, basis, record.noise_sd
+    )
+    total = len(record)
+    return accumulate(model, record.shots(), lambda done: progress("reading shots", done / total))
+
+
+def estimate_memory(record: Record, unknown: Unknown) -> int:
+    """Bytes that a reconstruction takes at its peak, roughly: cubes, blocks and their factors."""
+    components = unknown.basis(record).shape[1]
+    grid = record.specimen.grid
+    cube = components * grid.size * (4 if unknown.real else 8)
+    pixel_y, pixel_x = (
+        max(1.0, p / d) for p, d in zip(record.instrument.pixel, grid.voxel[1:], strict=True)
+    )
+    aliases = 1.0 if len(record.shape) and record.shape[2:] == (1, 1) else pixel_y * pixel_x
+    coupled = components if unknown.real else 1
+    size = coupled * grid.shape[0] * aliases
+    blocks = 8 * size**2 * np.prod(grid.shape[1:]) / aliases
+    return int(24 * cube + 5 * blocks)
+
+
+def provenance(record: Record, estimator: Any) -> dict[str, Any]:
+    """Versions, digests, settings and date, as plain JSON values."""
+    names = ("nearspin", "numpy", "scipy", "pywavelets")
+    return {
+        "versions": {name: importlib.metadata.version(name) for name in names},
+        "protocol_sha256": record.protocol.digest(),
+        "shots": len(record),
+        "noise_sd_T": record.noise_sd,
+        "estimator": repr(estimator),
+        "date": datetime.now(UTC).isoformat(timespec="seconds"),
+    }

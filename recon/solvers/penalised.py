@@ -1,0 +1,134 @@
+"""Penalised least squares: any combination of priors, one weight, chosen by a rule."""
+
+from __future__ import annotations
+
+from collections.abc import Callable
+from dataclasses import dataclass, field
+
+import numpy as np
+from numpy.typing import NDArray
+
+from recon.forward.blocks import BlockQuadratic
+from recon.priors.base import Frame, Prior, Term
+from recon.solvers.admm import ADMM, ADMMState
+from recon.solvers.estimate import Estimate, Progress, silent
+from recon.solvers.loop import Residuals, Solution, Stopping, solve
+from recon.solvers.problem import Problem, Weighted
+from recon.solvers.replicas import Replicas, Scatter
+from recon.solvers.weight import SteinRisk, WeightRule
+
+Array = NDArray[np.inexact]
+
+
+@dataclass(frozen=True)
+class Penalised:
+    """½‖W^{1/2}(y − A x)‖² + λ Σ_i s_i R_i(x).
+
+    Attributes
+    ----------
+    priors
+        What is assumed; constraints last, so that the estimate meets them.
+    shares
+        Relative weights s_i of the priors; equal if empty.
+    weight
+        How λ is chosen.
+    method, stopping
+        How it is solved.
+    search_tolerance
+        Tolerance of the solves that the search for the weight makes.
+    replicas
+        How errors are drawn; None leaves them out.
+    """
+
+    priors: tuple[Prior, ...]
+    shares: tuple[float, ...] = ()
+    weight: WeightRule = field(default_factory=SteinRisk)
+    method: ADMM = field(default_factory=ADMM)
+    stopping: Stopping = field(default_factory=lambda: Stopping(tolerance=5e-3, limit=300))
+    search_tolerance: float = 1.5e-2
+    replicas: Replicas | None = field(default_factory=Replicas)
+
+    def __str__(self) -> str:
+        return ", ".join(str(prior) for prior in self.priors)
+
+    def estimate(
+        self, quadratic: BlockQuadratic, frame: Frame, progress: Progress = silent
+    ) -> Estimate:
+        """Choose the weight, solve, and draw replicas for the error."""
+        run = _Run(self, quadratic, tuple(prior.on(frame) for prior in self.priors), progress)
+        weight = self.weight.choose(quadratic, run.searcher(), run.searcher())
+        solution = run.solve(weight, quadratic, self.stopping, None)
+        scatter = None
+        if self.replicas is not None:
+            scatter = run.scatter(weight, solution, self.replicas)
+        return Estimate(
+            x=solution.x,
+            weights={
+                str(prior): weight * share
+                for prior, part, share in zip(self.priors, run.terms, run.shares, strict=True)
+                if not part.constraint
+            },
+            reason=solution.reason,
+            misfit=solution.misfit,
+            history=solution.history,
+            standard_error=None if scatter is None else scatter.standard_error,
+            remarks=() if scatter is None else (_remark(scatter),),
+        )
+
+
+class _Run:
+    """One estimation: bound priors and their shares."""
+
+    def __init__(
+        self,
+        settings: Penalised,
+        quadratic: BlockQuadratic,
+        terms: tuple[Term, ...],
+        progress: Progress,
+    ) -> None:
+        self.settings, self.quadratic, self.terms = settings, quadratic, terms
+        self.shares = settings.shares or (1.0,) * len(terms)
+        self.progress = progress
+
+    def solve(
+        self, weight: float, data: BlockQuadratic, stopping: Stopping, state: ADMMState | None
+    ) -> Solution[ADMMState]:
+        parts = zip(self.terms, self.shares, strict=True)
+        problem = Problem(data, tuple(Weighted(term, weight * share) for term, share in parts))
+
+        def watch(iteration: int, residuals: Residuals) -> None:
+            self.progress(f"λ {weight:.3g}, iteration {iteration}", None)
+
+        return solve(problem, self.settings.method, stopping, state=state, watch=watch)
+
+    def searcher(self) -> Callable[[float, Array], Array]:
+        """A rough solver that starts where it last ended."""
+        rough = Stopping(self.settings.search_tolerance, limit=self.settings.stopping.limit)
+        last: ADMMState | None = None
+
+        def run(weight: float, b: Array) -> Array:
+            nonlocal last
+            solution = self.solve(weight, self.quadratic.with_linear(b), rough, last)
+            last = solution.state
+            return solution.x
+
+        return run
+
+    def scatter(self, weight: float, solution: Solution[ADMMState], replicas: Replicas) -> Scatter:
+        few = Stopping(0.0, limit=replicas.iterations)
+
+        def run(data: BlockQuadratic) -> Array:
+            return self.solve(weight, data, few, solution.state.copy()).x
+
+        return replicas.scatter(
+            self.quadratic, solution.x, run, lambda done, of: self.progress("replicas", done / of)
+        )
+
+
+def _remark(scatter: Scatter) -> str:
+    shares = ", ".join(f"{100 * share:.0f} %" for share in scatter.bias_share())
+    return (
+        "standard errors are the scatter and bias of re-noised replicas; share of bias in the mean "
+        f"squared error per component: {shares}. Detail that the prior removed from the estimate "
+        "is not in them, so intervals can be too narrow where the prior does not hold"
+    )

@@ -1,0 +1,39 @@
+"""Normal operators that fit the blocks: a function of lateral frequency plus a matrix along z."""
+
+from __future__ import annotations
+
+from dataclasses import dataclass
+
+import numpy as np
+from numpy.typing import NDArray
+
+FloatArray = NDArray[np.floating]
+
+
+@dataclass(frozen=True)
+class Symbol:
+    """DᴴD = lateral(κ') ⊗ 1 + 1 ⊗ axial, the same for every component.
+
+    Attributes
+    ----------
+    lateral
+        (ny, nx) in FFT order, or a scalar.
+    axial
+        (nz, nz) symmetric, or None.
+    """
+
+    lateral: FloatArray | float
+    axial: FloatArray | None = None
+
+    def __add__(self, other: Symbol) -> Symbol:
+        axial = self.axial if other.axial is None else other.axial
+        if self.axial is not None and other.axial is not None:
+            axial = self.axial + other.axial
+        return Symbol(self.lateral + other.lateral, axial)
+
+    def scaled(self, factor: float) -> Symbol:
+        """The symbol times a number."""
+        return Symbol(self.lateral * factor, None if self.axial is None else self.axial * factor)
+
+
+IDENTITY = Symbol(1.0)

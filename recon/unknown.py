@@ -1,0 +1,141 @@
+"""What is solved for: amounts of known species, or the complex cube over time."""
+
+from __future__ import annotations
+
+from collections.abc import Sequence
+from dataclasses import dataclass
+from typing import Protocol as Interface
+
+import numpy as np
+from numpy.typing import NDArray
+
+from recon.basis import species_basis, time_basis
+from recon.errors import InputError
+from recon.forward import Statistics
+from recon.record import Record
+from recon.result import Account, Cube, Result, SpeciesMaps
+from recon.solvers.estimate import Estimate
+from recon.specimen import Species
+
+ComplexArray = NDArray[np.complexfloating]
+
+
+class Unknown(Interface):
+    """The object's components, and how samples depend on them.
+
+    Attributes
+    ----------
+    real
+        Amounts are real, a cube of magnetisation is complex.
+    """
+
+    @property
+    def real(self) -> bool: ...
+
+    def basis(self, record: Record) -> ComplexArray:
+        """Φ (times, components), A/m per unit of each component."""
+
+    def compressed(self, statistics: Statistics) -> tuple[Statistics, ComplexArray | None]:
+        """Fewer components where the unknown allows it, and the matrix that expands them."""
+
+    def result(
+        self, record: Record, estimate: Estimate, expand: ComplexArray | None, account: Account
+    ) -> Result:
+        """The estimate as maps or as a cube."""
+
+
+@dataclass(frozen=True)
+class SpeciesAmounts:
+    """Amounts in mM of species with known lines; by default those of the record's specimen."""
+
+    species: tuple[Species, ...] = ()
+    real: bool = True
+
+    def basis(self, record: Record) -> ComplexArray:
+        return species_basis(self._species(record), record.instrument, record.protocol)
+
+    def compressed(self, statistics: Statistics) -> tuple[Statistics, ComplexArray | None]:
+        return statistics, None
+
+    def result(
+        self, record: Record, estimate: Estimate, expand: ComplexArray | None, account: Account
+    ) -> SpeciesMaps:
+        return SpeciesMaps(
+            grid=record.specimen.grid,
+            values=estimate.x.astype(np.float32, copy=False),
+            standard_error=estimate.standard_error,
+            account=account,
+            names=tuple(one.name for one in self._species(record)),
+        )
+
+    def _species(self, record: Record) -> Sequence[Species]:
+        return self.species or record.specimen.species
+
+
+@dataclass(frozen=True)
+class ComplexCube:
+    """Magnetisation in A/m at every sample time, without a line list.
+
+    The time axis is first compressed to the leading left singular vectors of b: those that stand
+    above the noise (Marchenko & Pastur's edge; Math. USSR Sbornik 1:457, 1967).
+
+    Attributes
+    ----------
+    vectors
+        Number of singular vectors to keep; None counts those above the noise, 0 keeps every time.
+    """
+
+    vectors: int | None = None
+    real: bool = False
+
+    def basis(self, record: Record) -> ComplexArray:
+        return time_basis(record.protocol)
+
+    def compressed(self, statistics: Statistics) -> tuple[Statistics, ComplexArray | None]:
+        if self.vectors == 0:
+            return statistics, None
+        count = len(statistics.linear)
+        b = statistics.linear.reshape(count, -1)
+        noise = _noise_power(statistics)
+        scale = np.prod(statistics.grid.shape[1:])
+        values, vectors = np.linalg.eigh((b @ b.conj().T).astype(complex) / scale)
+        order = np.argsort(values)[::-1]
+        if self.vectors is None:
+            edge = noise * (1 + np.sqrt(count / _independent(statistics))) ** 2
+            keep = max(1, int(np.sum(values > edge)))
+        else:
+            keep = min(self.vectors, count)
+        expand = vectors[:, order[:keep]]
+        return statistics.projected(expand), expand
+
+    def result(
+        self, record: Record, estimate: Estimate, expand: ComplexArray | None, account: Account
+    ) -> Cube:
+        x, error = estimate.x, estimate.standard_error
+        if expand is not None:
+            x = np.tensordot(expand.astype(np.complex64), x, 1)
+            if error is not None:
+                error = np.sqrt(np.tensordot(np.abs(expand.astype(np.complex64)) ** 2, error**2, 1))
+        return Cube(
+            grid=record.specimen.grid,
+            values=x.astype(np.complex64, copy=False),
+            standard_error=error,
+            account=account,
+            sample_times=record.protocol.sample_times,
+            larmor_frequency=record.instrument.larmor_frequency,
+            reference_shift_ppm=record.protocol.reference_shift_ppm,
+        )
+
+
+def _noise_power(statistics: Statistics) -> float:
+    """Expected noise of one row of b, summed over the grid: the trace of G for one time."""
+    return float(np.einsum("aayx->", statistics.normal).real)
+
+
+def _independent(statistics: Statistics) -> float:
+    """Number of independent values in one row of b: (tr G)² / tr G²."""
+    trace = np.einsum("aayx->", statistics.normal).real
+    square = float((np.abs(statistics.normal) ** 2).sum())
+    if square == 0:
+        raise InputError("no shot sees the object", "protocol", "check axes and wavevectors")
+    return float(trace**2 / square)
