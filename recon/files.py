@@ -46,4 +46,6 @@ def atomic_path(target: Path | str) -> Iterator[Path]:
 def write_failure(target: Path, error: OSError) -> InputError:
     """Turn a failed write into the one line a person reads."""
     reason = error.strerror or str(error)
-    return InputError(f"cannot write ({reason})", str(target), "choose a folder with room and write access")
+    return InputError(
+        f"cannot write ({reason})", str(target), "choose a folder with room and write access"
+    )
