@@ -27,8 +27,9 @@ def species_basis(
     """
     shift = np.array([one.shift_ppm for one in species]) - protocol.reference_shift_ppm
     frequency = shift * 1e-6 * instrument.larmor_frequency
-    rate = 2j * np.pi * frequency + 1 / np.array([one.t2_star for one in species])
-    courses = np.exp(-protocol.sample_times[:, None] * rate)
+    decay = 1 / np.array([one.t2_star for one in species])
+    rate = (decay + 2j * np.pi * frequency).astype(complex)
+    courses: ComplexArray = np.exp(-protocol.sample_times[:, None] * rate)
     return courses * magnetisation_per_mM(species, instrument)
 
 

@@ -36,7 +36,7 @@ for _verb in VERBS:
 
 def main(arguments: list[str] | None = None) -> None:
     """Run a verb. A mistake in the input is one line on standard error and exit code 2."""
-    warnings.showwarning = _say_warning  # type: ignore[assignment]
+    warnings.showwarning = _say_warning
     warnings.simplefilter("always", InputWarning)
     try:
         nearspin.main(arguments, standalone_mode=False)

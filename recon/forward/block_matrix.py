@@ -46,14 +46,14 @@ class BlockMatrix:
         """Matrix times vectors (groups, batch, q, blocks)."""
         if not self._columnwise:
             product = np.matmul(self._entries, vectors.transpose(0, 3, 2, 1))
-            return product.transpose(0, 3, 2, 1)  # type: ignore[no-any-return]
+            return product.transpose(0, 3, 2, 1)
         entries = self._entries[:, None]
         product = entries[:, :, :, 0] * vectors[:, :, None, 0]
         work = np.empty_like(product)
         for column in range(1, self.size):
             np.multiply(entries[:, :, :, column], vectors[:, :, None, column], out=work)
             product += work
-        return product  # type: ignore[no-any-return]
+        return product
 
     def inverse(self) -> BlockMatrix:
         """The inverse of every matrix."""

@@ -16,6 +16,7 @@ from __future__ import annotations
 from collections.abc import Callable
 from copy import copy
 from functools import cached_property
+from typing import Any
 
 import numpy as np
 import scipy.fft
@@ -57,7 +58,7 @@ class BlockQuadratic:
     def linear(self) -> Array:
         """b = Aᴴ W y, (components, nz, ny, nx); its real part for a real unknown."""
         b = scipy.fft.ifft2(self.statistics.linear)
-        return np.ascontiguousarray(b.real) if self.real else b  # type: ignore[no-any-return]
+        return np.ascontiguousarray(b.real) if self.real else b
 
     def with_linear(self, b: Array) -> BlockQuadratic:
         """The same blocks with another b (the energy stays that of the record)."""
@@ -129,7 +130,7 @@ class BlockQuadratic:
         """Mean over the lateral axes of G's diagonal, (components, nz)."""
         per_depth = np.einsum("aa...->a...", self.statistics.normal).real
         share = per_depth.reshape(-1, self.shape[1], *self.layout.blocks).mean(axis=(0, 2, 3))
-        return np.outer(np.diag(self.statistics.gram).real, share)  # type: ignore[no-any-return]
+        return np.outer(np.diag(self.statistics.gram).real, share)
 
     def filtered(self, matrix: BlockMatrix, x: Array) -> Array:
         """Apply blocks to an object: FFT, small products, inverse FFT."""
@@ -150,9 +151,9 @@ class BlockQuadratic:
         if self._mix is not None:
             spectrum = np.tensordot(self._mix, spectrum, axes=1)
         if self._half:
-            return scipy.fft.irfft2(spectrum, s=self.shape[-2:], overwrite_x=True)  # type: ignore[no-any-return]
+            return scipy.fft.irfft2(spectrum, s=self.shape[-2:], overwrite_x=True)
         x = scipy.fft.ifft2(spectrum, overwrite_x=True)
-        return np.ascontiguousarray(x.real) if self.real else x  # type: ignore[no-any-return]
+        return np.ascontiguousarray(x.real) if self.real else x
 
     def half_weights(self) -> FloatArray:
         """How many lattice frequencies each block stands for, (blocks,): 1, or 2 for half planes."""
@@ -172,12 +173,13 @@ class BlockQuadratic:
         aliases = int(np.prod(self.layout.aliases))
         mean = diagonal.reshape(len(diagonal), -1, aliases, self.shape[1]).mean(axis=2)
         if self._mix is not None:
-            return np.abs(self._mix) ** 2 @ mean[:, 0]  # type: ignore[no-any-return]
+            return np.abs(self._mix) ** 2 @ mean[:, 0]
         return np.broadcast_to(mean[0], self.shape[:2])
 
     def _assemble(self) -> tuple[ComplexArray | None, BlockMatrix]:
         """Choose how components are uncoupled; return the mixing matrix and the blocks."""
-        normal, gram = self.statistics.normal, self.statistics.gram.astype(np.complex64)
+        normal: Any = self.statistics.normal
+        gram: Any = self.statistics.gram.astype(np.complex64)
         if not self.real and np.allclose(gram, gram[0, 0].real * np.eye(len(gram))):
             return None, self._matrix((gram[0, 0].real * normal)[None], len(gram))
         if self.real and len(gram) > 1 and np.abs(gram.imag).max() > 1e-6 * np.abs(gram).max():
@@ -186,13 +188,8 @@ class BlockQuadratic:
             normal = 0.5 * (normal + self.layout.mirrored(normal).conj())
             gram = gram.real
         values, vectors = np.linalg.eigh(gram)
-        mix = (
-            None
-            if len(gram) == 1
-            else vectors.astype(normal.real.dtype if self.real else normal.dtype)
-        )
-        values = values.astype(normal.real.dtype)
-        return mix, self._matrix(values[:, None, None, None, None] * normal, 1)
+        mixed = self._matrix(values[:, None, None, None, None] * normal, 1)
+        return (None if len(gram) == 1 else vectors), mixed
 
     def _symmetric_kronecker(self, gram: ComplexArray, normal: ComplexArray) -> ComplexArray:
         """½ (Γ ⊗ G(κ') + conj(Γ ⊗ G(−κ'))): the blocks seen by a real unknown."""
@@ -203,7 +200,7 @@ class BlockQuadratic:
             gram[expand][..., None, None] * normal[None, :, None]
             + gram.conj()[expand][..., None, None] * mirrored[None, :, None]
         )
-        return joint.reshape(size, size, *normal.shape[2:])  # type: ignore[no-any-return]
+        return joint.reshape(size, size, *normal.shape[2:])
 
     def _matrix(self, entries: ComplexArray, batch: int) -> BlockMatrix:
         """Keep the half plane where the other half follows by symmetry."""
@@ -214,10 +211,10 @@ class BlockQuadratic:
         """A symbol in block order: diagonal (q, blocks) or scalar, and coupling (q, q)."""
         repeats = self.matrix.size // self.shape[1]
         coupling = None if symbol.axial is None else np.kron(np.eye(repeats), symbol.axial)
-        if np.ndim(symbol.lateral) == 0:
-            return float(symbol.lateral), coupling
+        if isinstance(symbol.lateral, float | int):
+            return symbol.lateral, coupling
         plane = np.asarray(symbol.lateral)[..., : self._columns]
-        tall = np.broadcast_to(plane, (self.shape[1], *plane.shape))
-        one = self.layout.gather(tall[None])
-        diagonal = np.tile(one.reshape(len(one), -1), (self.matrix.size // len(one), 1))
+        tall: Any = np.broadcast_to(plane, (self.shape[1], *plane.shape))
+        one: Any = self.layout.gather(tall[None])
+        diagonal: FloatArray = np.tile(one.reshape(len(one), -1), (self.matrix.size // len(one), 1))
         return diagonal, coupling

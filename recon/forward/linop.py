@@ -32,7 +32,7 @@ class ForwardLinop(Linop):  # type: ignore[misc]
 
     def whiten(self, samples: ComplexArray) -> ComplexArray:
         """W^{1/2} y."""
-        return samples * self._root[:, None, None, None]  # type: ignore[no-any-return]
+        return samples * self._root[:, None, None, None]
 
     def blocks(self) -> BlockQuadratic:
         """The normal operator's blocks, with b = 0."""

@@ -77,7 +77,7 @@ class ForwardOperator:
                 f"samples have shape {samples.shape}, not {self.sample_shape}", "operator"
             )
         spectrum = self.back_project(enumerate(samples))
-        return scipy.fft.ifft2(spectrum, overwrite_x=True)  # type: ignore[no-any-return]
+        return scipy.fft.ifft2(spectrum, overwrite_x=True)
 
     def object_spectrum(self, objects: ComplexArray) -> ComplexArray:
         """FFT of the object times the voxel footprint, over unwrapped frequencies.
@@ -179,7 +179,7 @@ class ForwardOperator:
         """Φ: components to times."""
         if self._basis_is_identity:
             return plane
-        return (self._basis @ plane.reshape(len(plane), -1)).reshape(self.sample_shape[1:])  # type: ignore[no-any-return]
+        return (self._basis @ plane.reshape(len(plane), -1)).reshape(self.sample_shape[1:])
 
     def _unmix(self, samples: ComplexArray) -> ComplexArray:
         """Φᴴ: times to components."""
@@ -187,7 +187,7 @@ class ForwardOperator:
         if self._basis_is_identity:
             return samples
         mixed = self._basis.conj().T @ samples.reshape(len(samples), -1)
-        return mixed.reshape(self.object_shape[0], *self.sample_shape[2:])  # type: ignore[no-any-return]
+        return mixed.reshape(self.object_shape[0], *self.sample_shape[2:])
 
     # Where things lie --------------------------------------------------------------------
 
@@ -247,4 +247,4 @@ def fold(spectrum: ComplexArray, shape: tuple[int, int]) -> ComplexArray:
     tall, wide = spectrum.shape[-2:]
     if (tall, wide) == shape:
         return spectrum
-    return spectrum.reshape(*spectrum.shape[:-2], tall // ny, ny, wide // nx, nx).sum(axis=(-4, -2))  # type: ignore[no-any-return]
+    return spectrum.reshape(*spectrum.shape[:-2], tall // ny, ny, wide // nx, nx).sum(axis=(-4, -2))

@@ -88,7 +88,7 @@ class Statistics:
         """Square root of the mean diagonal of G per component: signal-to-noise of one unit."""
         q = len(self.normal)
         mean = float(np.einsum("aayx->", self.normal).real) / (q * np.prod(self.layout.blocks))
-        return np.sqrt(np.diag(self.gram).real * mean)  # type: ignore[no-any-return]
+        return np.sqrt(np.diag(self.gram).real * mean)
 
 
 def accumulate(
@@ -131,7 +131,7 @@ def accumulate(
                         "NaN or infinite sample", f"shot {shot}", "drop or mend the shot"
                     )
                 energy += float(part) * weight[shot]
-                yield shot, one * np.float32(weight[shot])
+                yield shot, (one * np.float32(weight[shot])).astype(np.complex64, copy=False)
                 done += 1
             if progress is not None:
                 progress(done)

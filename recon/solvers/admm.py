@@ -15,6 +15,7 @@ from collections.abc import Callable
 from dataclasses import dataclass, field
 from functools import reduce
 from operator import add
+from typing import Any
 
 import numpy as np
 from numpy.typing import NDArray
@@ -103,7 +104,7 @@ class ADMM:
             part.term.adjoint(u - d)
             for part, u, d in zip(problem.terms, state.u, state.d, strict=True)
         ]
-        right = reduce(add, pulled)
+        right: Any = reduce(add, pulled)
         right *= kind(rho)
         right += quadratic.linear
         assert state._step is not None
@@ -145,8 +146,7 @@ class ADMM:
             if ratio > self.imbalance or ratio < 1 / self.imbalance:
                 factor = float(np.clip(np.sqrt(ratio), 0.1, 10))
                 state.penalty *= factor
-                for d in state.d:
-                    d /= d.dtype.type(factor)
+                state.d = [d / d.real.dtype.type(factor) for d in state.d]
                 state._step = None
         if state._step is None:
             symbols = (part.term.symbol for part in problem.terms)
