@@ -156,7 +156,7 @@ class BlockQuadratic:
         return np.ascontiguousarray(x.real) if self.real else x
 
     def half_weights(self) -> FloatArray:
-        """How many lattice frequencies each block stands for, (blocks,): 1, or 2 for half planes."""
+        """How many lattice frequencies each block stands for, (blocks,): 1 or 2."""
         rows, columns = self._block_shape
         weights = np.ones((rows, columns))
         if self._half:

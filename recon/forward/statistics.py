@@ -119,7 +119,8 @@ def accumulate(
         for where, samples in batches:
             if samples.shape[1:] != operator.sample_shape[1:]:
                 raise InputError(
-                    f"samples per shot have shape {samples.shape[1:]}, not {operator.sample_shape[1:]}",
+                    f"samples of a shot have shape {samples.shape[1:]}, "
+                    f"not {operator.sample_shape[1:]}",
                     f"shots {where.start} to {where.stop - 1}",
                 )
             for offset, one in enumerate(samples):
