@@ -130,13 +130,6 @@ class GeneralOperator:
             self.back_project_planes(shot, np.tensordot(root, white, 1), sink)
         return sink.total()
 
-    def channel_power(self, objects: ComplexArray, shot: int, samples: ComplexArray) -> FloatArray:
-        """Mean squared residual of a shot per channel in units of its stated noise.
-
-        Samples (times, channels y, channels x); (channels y, channels x).
-        """
-        raise NotImplementedError
-
     # One shot at a time ------------------------------------------------------------------
 
     def _source(self, objects: ComplexArray) -> _Source:
