@@ -192,9 +192,7 @@ class GeneralModel:
         instrument, grid = self.ideal.instrument, self.grid
         wave_y, wave_x = (
             np.arange(-(n // 2), n - n // 2) * step + q
-            for n, step, q in zip(
-                grid.shape[1:], grid.lattice_step, self.sensor[shot], strict=True
-            )
+            for n, step, q in zip(grid.shape[1:], grid.lattice_step, self.sensor[shot], strict=True)
         )
         edges = np.asarray(instrument.pixel)
         transfer: ComplexArray = pixel_footprint(wave_y[:, None], wave_x, instrument.pixel)
