@@ -5,8 +5,10 @@ from __future__ import annotations
 from dataclasses import dataclass
 
 import numpy as np
+import scipy.fft
 from numpy.typing import NDArray
 
+Array = NDArray[np.inexact]
 FloatArray = NDArray[np.floating]
 
 
@@ -34,6 +36,21 @@ class Symbol:
     def scaled(self, factor: float) -> Symbol:
         """The symbol times a number."""
         return Symbol(self.lateral * factor, None if self.axial is None else self.axial * factor)
+
+    def apply(self, x: Array) -> Array:
+        """DᴴD x for an unknown (components, nz, ny, nx), real or complex; its kind is kept."""
+        kind = x.real.dtype
+        lateral = np.asarray(self.lateral, kind)
+        if lateral.ndim == 0:
+            image = x * lateral
+        elif np.isrealobj(x):
+            spectrum = scipy.fft.rfft2(x) * lateral[:, : x.shape[-1] // 2 + 1]
+            image = scipy.fft.irfft2(spectrum, x.shape[-2:])
+        else:
+            image = scipy.fft.ifft2(scipy.fft.fft2(x) * lateral)
+        if self.axial is not None:
+            image = image + np.einsum("zw,cwyx->czyx", self.axial.astype(kind), x)
+        return image
 
 
 IDENTITY = Symbol(1.0)
