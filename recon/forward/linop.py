@@ -12,8 +12,9 @@ from numpy.typing import NDArray
 from sigpy.linop import Linop
 
 from recon.forward.blocks import BlockQuadratic
+from recon.forward.normal import normal_blocks
 from recon.forward.operator import ForwardOperator
-from recon.forward.statistics import Statistics, normal_blocks
+from recon.forward.statistics import Statistics
 
 ComplexArray = NDArray[np.complexfloating]
 

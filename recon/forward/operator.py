@@ -2,8 +2,8 @@
 
 One FFT of the object serves all shots. It is laid out over unwrapped frequencies (twice the
 lattice, footprint included), so that each shot's shift by its nuclear wavevector is a slice;
-the sensor wavevector shifts one plane per shot. `apply` and `adjoint` walk the shots in order
-and keep one shot's work in memory.
+the sensor wavevector turns the image by a phase ramp. `apply` and `adjoint` walk the shots in
+order and keep a small batch of images in memory.
 """
 
 from __future__ import annotations
@@ -16,8 +16,12 @@ from numpy.typing import NDArray
 
 from recon.errors import InputError
 from recon.forward.model import ForwardModel
+from recon.forward.shot_tables import ShotTables
 
 ComplexArray = NDArray[np.complexfloating]
+
+BATCH_BYTES = 1 << 19
+"""Images transformed at once: a batch that stays in the processor's cache."""
 
 
 class ForwardOperator:
@@ -34,17 +38,13 @@ class ForwardOperator:
     def __init__(self, model: ForwardModel, dtype: type[np.complexfloating] = np.complex64) -> None:
         self.model = model
         self.dtype = np.dtype(dtype)
-        encoding = model.encoding
+        self.tables = ShotTables(model, self.dtype)
         self.object_shape = (model.components, *model.grid.shape)
-        self.sample_shape = (len(encoding), len(model.basis), *model.channels)
+        self.sample_shape = (len(model.encoding), len(model.basis), *model.channels)
         rows, columns = model.footprint()
-        self._footprint = (rows[:, None] * columns).astype(self.dtype.char.lower())
+        self.footprint = (rows[:, None] * columns).astype(self.dtype.char.lower())
         self._basis = model.basis.astype(self.dtype)
         self._basis_is_identity = np.array_equal(model.basis, np.eye(len(model.basis)))
-        self._reach = tuple(int(r) for r in np.abs(encoding.sensor).max(axis=0, initial=0))
-        if not model.is_one_detector:
-            self._transfer = model.detector_transfer(self._reach).astype(self.dtype)  # type: ignore[arg-type]
-        self._kernels: dict[tuple[int, float], ComplexArray] = {}
 
     def apply(self, objects: ComplexArray) -> ComplexArray:
         """A x.
@@ -60,8 +60,15 @@ class ForwardOperator:
             )
         spectrum = self.object_spectrum(objects)
         samples = np.empty(self.sample_shape, self.dtype)
-        for shot, plane in enumerate(self._component_samples(spectrum)):
-            samples[shot] = self._mix(plane)
+        images = self._detector_values if self.model.is_one_detector else self._images
+        for shots, planes in images(spectrum):
+            if self._basis_is_identity:
+                samples[shots] = planes
+                continue
+            flat = planes.reshape(*planes.shape[:2], -1)
+            np.matmul(
+                self._basis, flat, out=samples[shots].reshape(len(flat), len(self._basis), -1)
+            )
         return samples
 
     def adjoint(self, samples: ComplexArray) -> ComplexArray:
@@ -76,7 +83,7 @@ class ForwardOperator:
             raise InputError(
                 f"samples have shape {samples.shape}, not {self.sample_shape}", "operator"
             )
-        spectrum = self.back_project(enumerate(samples))
+        spectrum = self.back_project([(slice(0, len(samples)), samples)])
         return scipy.fft.ifft2(spectrum, overwrite_x=True)
 
     def object_spectrum(self, objects: ComplexArray) -> ComplexArray:
@@ -86,159 +93,112 @@ class ForwardOperator:
         """
         spectrum = scipy.fft.fft2(objects.astype(self.dtype, copy=False))
         unwrapped = np.tile(spectrum, (1, 1, 2, 2))
-        unwrapped *= self._footprint
+        unwrapped *= self.footprint
         return unwrapped
 
-    def back_project(self, shots: Iterable[tuple[int, ComplexArray]]) -> ComplexArray:
-        """Sum of Aᴴ over numbered shots, as an FFT-ordered spectrum (components, nz, ny, nx)."""
+    def back_project(
+        self,
+        batches: Iterable[tuple[slice, ComplexArray]],
+        weight: NDArray[np.floating] | None = None,
+    ) -> ComplexArray:
+        """Sum of w_j A_jᴴ y_j over batches of shots, as an FFT-ordered spectrum of the object.
+
+        Batches are pairs (shots, samples (n, times, channels y, channels x)).
+        """
         _, ny, nx = self.model.grid.shape
         components, nz = self.object_shape[:2]
         unwrapped = np.zeros((components, nz, 2 * ny, 2 * nx), self.dtype)
-        work = np.empty((components, nz, ny, nx), self.dtype)
-        for shot, samples in shots:
-            mixed = self._unmix(samples)
-            if self.model.is_one_detector:
-                self._back_project_detector(shot, mixed, unwrapped)
-            else:
-                self._back_project_camera(shot, mixed, unwrapped, work)
-        unwrapped *= self._footprint
+        project = self._back_detector if self.model.is_one_detector else self._back_images
+        for shots, samples in batches:
+            for part in self._parts(shots.start, shots.stop):
+                inside = samples[part.start - shots.start : part.stop - shots.start]
+                project(part, self._unmixed(inside), weight, unwrapped)
+        unwrapped *= self.footprint
         return fold(unwrapped, (ny, nx))
 
-    def response(self, shot: int) -> ComplexArray:
-        """What a shot makes of each object frequency: h(κ'), (nz, ny, nx), FFT order.
+    # Several shots at a time --------------------------------------------------------------
 
-        Includes kernel, footprint, detector transfer and shot amplitude; for a camera. One
-        detector sees a single frequency: `detector_response`.
-        """
-        encoding = self.model.encoding
-        _, ny, nx = self.model.grid.shape
-        rows, columns = self._nuclear_slices(shot)
-        field = self._kernel(shot) * self._transfer_slice(shot)
-        field = field * (self._footprint[rows, columns] * encoding.amplitude[shot]).astype(
-            self.dtype
-        )
-        shift = -(np.array([ny // 2, nx // 2]) + encoding.nuclear[shot])
-        return np.roll(field, shift, axis=(-2, -1))
+    def _parts(self, start: int, stop: int) -> Iterator[slice]:
+        """Slices of shots whose images fit the batch."""
+        image = self.model.components * np.prod(self.model.grid.shape[1:]) * self.dtype.itemsize
+        size = max(1, int(BATCH_BYTES // image))
+        for first in range(start, stop, size):
+            yield slice(first, min(first + size, stop))
 
-    def detector_response(self, shot: int) -> tuple[ComplexArray, int, int]:
-        """What one detector sees: h (nz,) and its object frequency κ' = −q − k, in steps (y, x)."""
-        row, column = self._detector_index(shot)
-        rows, columns = self._nuclear_slices(shot)
-        place = rows.start + row, columns.start + column
-        factor = self._footprint[place] * self.model.encoding.amplitude[shot]
-        _, ny, nx = self.model.grid.shape
-        return self._kernel(shot)[:, row, column] * factor, place[0] - ny, place[1] - nx
-
-    # One shot at a time ------------------------------------------------------------------
-
-    def _component_samples(self, spectrum: ComplexArray) -> Iterator[ComplexArray]:
-        """Samples of each component's unit time course, (components, channels y, x) per shot."""
-        model, amplitude = self.model, self.model.encoding.amplitude
-        _, ny, nx = model.grid.shape
-        gain = np.prod(model.channels) / (ny * nx)
+    def _images(self, spectrum: ComplexArray) -> Iterator[tuple[slice, ComplexArray]]:
+        """Images of each component's unit time course, (shots, components, cy, cx)."""
+        tables = self.tables
         work = np.empty(self.object_shape, self.dtype)
-        for shot in range(len(model.encoding)):
-            factor = self.dtype.type(gain * amplitude[shot])
-            rows, columns = self._nuclear_slices(shot)
-            if model.is_one_detector:
-                row, column = self._detector_index(shot)
-                objects = spectrum[:, :, rows.start + row, columns.start + column]
-                value = objects @ self._kernel(shot)[:, row, column]
-                yield (factor * value)[:, None, None]
-                continue
-            np.multiply(spectrum[:, :, rows, columns], self._kernel(shot), out=work)
-            field = work.sum(axis=1)
-            field *= self._transfer_slice(shot)
-            plane = scipy.fft.ifft2(self._to_channels(shot, field), overwrite_x=True)
-            plane *= factor
-            yield plane
+        for part in self._parts(0, len(self.model.encoding)):
+            shape = (part.stop - part.start, len(work), *work.shape[2:])
+            fields = np.empty(shape, self.dtype)
+            for field, shot in zip(fields, range(part.start, part.stop), strict=True):
+                rows, columns = tables.windows[shot]
+                np.multiply(spectrum[:, :, rows, columns], tables.response(shot)[0], out=work)
+                np.add.reduce(work, axis=1, out=field)
+                if not tables.fused:
+                    field *= tables.transfer(shot)
+            planes = scipy.fft.ifft2(fold(fields, self.model.channels), overwrite_x=True)
+            ramp_y, ramp_x = tables.ramps(part)
+            planes *= (tables.gain * ramp_y)[:, None, :, None]
+            planes *= ramp_x[:, None, None, :]
+            yield part, planes
 
-    def _back_project_camera(
-        self, shot: int, mixed: ComplexArray, unwrapped: ComplexArray, work: ComplexArray
+    def _back_images(
+        self,
+        shots: slice,
+        planes: ComplexArray,
+        weight: NDArray[np.floating] | None,
+        unwrapped: ComplexArray,
     ) -> None:
-        field = self._from_channels(shot, scipy.fft.fft2(mixed, overwrite_x=True))
-        transfer = self._transfer_slice(shot).conj()
-        transfer *= self.dtype.type(np.conj(self.model.encoding.amplitude[shot]))
-        field *= transfer
-        np.conj(field, out=field)
-        np.multiply(self._kernel(shot), field[:, None], out=work)
-        np.conj(work, out=work)
-        rows, columns = self._nuclear_slices(shot)
-        unwrapped[:, :, rows, columns] += work
+        """Add the adjoint of `_images` for images (shots, components, cy, cx) to a spectrum."""
+        tables = self.tables
+        ramp_y, ramp_x = (ramp.conj() for ramp in tables.ramps(shots))
+        if weight is not None:
+            ramp_y *= weight[shots, None].astype(ramp_y.real.dtype)
+        planes = planes * ramp_y[:, None, :, None]
+        planes *= ramp_x[:, None, None, :]
+        fields = scipy.fft.fft2(planes, overwrite_x=True)
+        if self.model.binning != (1, 1):
+            fields = np.tile(fields, (1, 1, *self.model.binning))
+        work = np.empty(self.object_shape, self.dtype)
+        for field, shot in zip(fields, range(shots.start, shots.stop), strict=True):
+            if not tables.fused:
+                field *= tables.transfer(shot).conj()
+            np.multiply(tables.response(shot)[1], field[:, None], out=work)
+            rows, columns = tables.windows[shot]
+            seen = unwrapped[:, :, rows, columns]
+            seen += work
 
-    def _back_project_detector(
-        self, shot: int, mixed: ComplexArray, unwrapped: ComplexArray
+    def _detector_values(self, spectrum: ComplexArray) -> Iterator[tuple[slice, ComplexArray]]:
+        """Samples of one detector, (1, components, 1, 1) per shot."""
+        gain = self.dtype.type(self.tables.gain)
+        for shot in range(len(self.model.encoding)):
+            response, row, column = self.tables.detector_response(shot)
+            value = spectrum[:, :, row, column] @ (response * gain)
+            yield slice(shot, shot + 1), value[None, :, None, None]
+
+    def _back_detector(
+        self,
+        shots: slice,
+        planes: ComplexArray,
+        weight: NDArray[np.floating] | None,
+        unwrapped: ComplexArray,
     ) -> None:
-        row, column = self._detector_index(shot)
-        rows, columns = self._nuclear_slices(shot)
-        kernel = self._kernel(shot)[:, row, column] * self.model.encoding.amplitude[shot]
-        value = mixed.reshape(-1, 1) * kernel.conj()
-        unwrapped[:, :, rows.start + row, columns.start + column] += value
+        for plane, shot in zip(planes, range(shots.start, shots.stop), strict=True):
+            response, row, column = self.tables.detector_response(shot)
+            if weight is not None:
+                response = response * response.real.dtype.type(weight[shot])
+            unwrapped[:, :, row, column] += plane.reshape(-1, 1) * response.conj()
 
-    def _mix(self, plane: ComplexArray) -> ComplexArray:
-        """Φ: components to times."""
-        if self._basis_is_identity:
-            return plane
-        return (self._basis @ plane.reshape(len(plane), -1)).reshape(self.sample_shape[1:])
-
-    def _unmix(self, samples: ComplexArray) -> ComplexArray:
-        """Φᴴ: times to components."""
-        samples = samples.astype(self.dtype, copy=self._basis_is_identity)
+    def _unmixed(self, samples: ComplexArray) -> ComplexArray:
+        """Φᴴ: samples (shots, times, cy, cx) to images (shots, components, cy, cx)."""
+        samples = samples.astype(self.dtype, copy=False)
         if self._basis_is_identity:
             return samples
-        mixed = self._basis.conj().T @ samples.reshape(len(samples), -1)
-        return mixed.reshape(self.object_shape[0], *self.sample_shape[2:])
-
-    # Where things lie --------------------------------------------------------------------
-
-    def _kernel(self, shot: int) -> ComplexArray:
-        encoding = self.model.encoding
-        key = (int(encoding.sensing_axis[shot]), float(encoding.axial[shot]))
-        if key not in self._kernels:
-            if len(self._kernels) >= 64:
-                self._kernels.pop(next(iter(self._kernels)))
-            self._kernels[key] = self.model.kernel(*key).astype(self.dtype)
-        return self._kernels[key]
-
-    def _nuclear_slices(self, shot: int) -> tuple[slice, slice]:
-        """Where κ_f − k of the grid's own band lies in the unwrapped spectrum."""
-        _, ny, nx = self.model.grid.shape
-        shift_y, shift_x = (int(m) for m in self.model.encoding.nuclear[shot])
-        top, left = ny - ny // 2 - shift_y, nx - nx // 2 - shift_x
-        return slice(top, top + ny), slice(left, left + nx)
-
-    def _transfer_slice(self, shot: int) -> ComplexArray:
-        """P(κ_f + q) over the grid's own band."""
-        _, ny, nx = self.model.grid.shape
-        shift_y, shift_x = (int(m) for m in self.model.encoding.sensor[shot])
-        top, left = self._reach[0] + shift_y, self._reach[1] + shift_x
-        return self._transfer[top : top + ny, left : left + nx]
-
-    def _detector_index(self, shot: int) -> tuple[int, int]:
-        """The field frequency κ_f = −q that one detector sees, as indices into the band."""
-        _, ny, nx = self.model.grid.shape
-        shift_y, shift_x = (int(m) for m in self.model.encoding.sensor[shot])
-        row, column = ny // 2 - shift_y, nx // 2 - shift_x
-        if not (0 <= row < ny and 0 <= column < nx):
-            raise InputError("sensor wavevector lies beyond the grid's band", f"shot {shot}")
-        return row, column
-
-    def _channel_shift(self, shot: int) -> tuple[int, int]:
-        _, ny, nx = self.model.grid.shape
-        shift_y, shift_x = (int(m) for m in self.model.encoding.sensor[shot])
-        return shift_y - ny // 2, shift_x - nx // 2
-
-    def _to_channels(self, shot: int, field: ComplexArray) -> ComplexArray:
-        """Field band to the channels' FFT order: shift by q, fold onto the pixel lattice."""
-        rolled = np.roll(field, self._channel_shift(shot), axis=(-2, -1))
-        return fold(rolled, self.model.channels)
-
-    def _from_channels(self, shot: int, spectrum: ComplexArray) -> ComplexArray:
-        """The adjoint of `_to_channels`."""
-        shift_y, shift_x = self._channel_shift(shot)
-        if self.model.binning != (1, 1):
-            spectrum = np.tile(spectrum, (1, *self.model.binning))
-        return np.roll(spectrum, (-shift_y, -shift_x), axis=(-2, -1))
+        flat = samples.reshape(*samples.shape[:2], -1)
+        mixed = np.matmul(self._basis.conj().T, flat)
+        return mixed.reshape(len(samples), -1, *samples.shape[2:])
 
 
 def fold(spectrum: ComplexArray, shape: tuple[int, int]) -> ComplexArray:
@@ -247,4 +207,5 @@ def fold(spectrum: ComplexArray, shape: tuple[int, int]) -> ComplexArray:
     tall, wide = spectrum.shape[-2:]
     if (tall, wide) == shape:
         return spectrum
-    return spectrum.reshape(*spectrum.shape[:-2], tall // ny, ny, wide // nx, nx).sum(axis=(-4, -2))
+    split = spectrum.reshape(*spectrum.shape[:-2], tall // ny, ny, wide // nx, nx)
+    return split.sum(axis=(-4, -2))

@@ -19,6 +19,7 @@ from numpy.typing import NDArray
 from recon.errors import InputError
 from recon.forward.layout import Layout
 from recon.forward.model import ForwardModel
+from recon.forward.normal import normal_blocks
 from recon.forward.operator import ForwardOperator
 from recon.grid import Grid
 
@@ -114,66 +115,33 @@ def accumulate(
     weight = model.encoding.weight
     energy, done = 0.0, 0
 
-    def shots() -> Iterator[tuple[int, ComplexArray]]:
+    def checked() -> Iterator[tuple[slice, ComplexArray]]:
         nonlocal energy, done
-        for where, samples in batches:
+        for shots, samples in batches:
+            samples = np.ascontiguousarray(samples, np.complex64)
             if samples.shape[1:] != operator.sample_shape[1:]:
                 raise InputError(
                     f"samples of a shot have shape {samples.shape[1:]}, "
                     f"not {operator.sample_shape[1:]}",
-                    f"shots {where.start} to {where.stop - 1}",
+                    f"shots {shots.start} to {shots.stop - 1}",
                 )
-            for offset, one in enumerate(samples):
-                shot = where.start + offset
-                one = np.ascontiguousarray(one, np.complex64)
-                part = np.linalg.norm(one.ravel().view(np.float32)) ** 2
-                if not np.isfinite(part):
-                    raise InputError(
-                        "NaN or infinite sample", f"shot {shot}", "drop or mend the shot"
-                    )
-                energy += float(part) * weight[shot]
-                yield shot, (one * np.float32(weight[shot])).astype(np.complex64, copy=False)
-                done += 1
+            for shot, one in zip(range(shots.start, shots.stop), samples, strict=True):
+                energy += _squared(one, shot) * weight[shot]
+            yield shots, samples
+            done += len(samples)
             if progress is not None:
                 progress(done)
 
-    linear = operator.back_project(shots())
+    linear = operator.back_project(checked(), weight)
     layout, normal = normal_blocks(operator)
     gram = model.basis.conj().T @ model.basis
     return Statistics(model.grid, layout, linear, normal, gram, energy, model.sample_count)
 
 
-def normal_blocks(operator: ForwardOperator) -> tuple[Layout, ComplexArray]:
-    """Blocks of G = Σ_j w_j h_j h_jᴴ for a unit time course, before any data exist.
-
-    Returns the layout and (q, q, blocks y, blocks x) complex64, the matrix of ⟨row|G|column⟩.
-    """
-    model = operator.model
-    layout = Layout.of(model.grid.shape, (1, 1) if model.is_one_detector else model.binning)
-    q = layout.block_size
-    normal = np.zeros((q, q, *layout.blocks), np.complex64)
-    gain = np.prod(model.channels) / np.prod(model.grid.shape[1:])
-    if model.is_one_detector:
-        _add_detector_blocks(operator, float(gain), normal)
-    else:
-        work = np.empty((q, *layout.blocks), np.complex64)
-        for shot, weight in enumerate(model.encoding.weight):
-            response = layout.gather(operator.response(shot)[None])
-            response *= np.sqrt(gain * weight).astype(np.float32)
-            conjugate = response.conj()
-            for row in range(q):
-                part = np.multiply(conjugate[row], response[row:], out=work[row:])
-                normal[row, row:] += part
-    for row in range(q):
-        normal[row + 1 :, row] = normal[row, row + 1 :].conj()
-    return layout, normal
-
-
-def _add_detector_blocks(operator: ForwardOperator, gain: float, normal: ComplexArray) -> None:
-    """Rank-one updates at the single object frequency of each shot."""
-    encoding = operator.model.encoding
-    _, ny, nx = operator.model.grid.shape
-    for shot, weight in enumerate(encoding.weight):
-        values, row, column = operator.detector_response(shot)
-        values = values * np.sqrt(gain * weight)
-        normal[:, :, row % ny, column % nx] += np.triu(np.outer(values.conj(), values))
+def _squared(samples: ComplexArray, shot: int) -> float:
+    """‖y‖² of one shot, refused if a sample is not finite."""
+    flat = samples.ravel().view(np.float32)
+    square = float(np.dot(flat, flat))
+    if not np.isfinite(square):
+        raise InputError("NaN or infinite sample", f"shot {shot}", "drop or mend the shot")
+    return square
