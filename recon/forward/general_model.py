@@ -20,7 +20,7 @@ from recon.errors import InputError
 from recon.forward.channels import Channels, LayerDensity
 from recon.forward.lattice import LatticeEncoding
 from recon.forward.model import ForwardModel
-from recon.forward.off_lattice import middle_phase, nearest_steps
+from recon.forward.off_lattice import EXACT, middle_phase, nearest_steps
 from recon.forward.wide import Window
 from recon.grid import Grid
 from recon.instrument import Instrument
@@ -130,7 +130,7 @@ class GeneralModel:
             amplitude=amplitude,
             nuclear=np.ascontiguousarray(k[:, ::-1]),
             sensor=np.ascontiguousarray(q[:, ::-1]),
-            off_lattice=nuclear_rest.any(axis=1),
+            off_lattice=np.asarray(nuclear_rest.any(axis=1)),
             window=window,
             channels=channels,
             margin=margin,
@@ -156,6 +156,24 @@ class GeneralModel:
         """Number of complex samples that carry weight."""
         used = int(np.count_nonzero(self.weight))
         return used * len(self.ideal.basis) * self.channels.alive
+
+    @property
+    def only_channels(self) -> bool:
+        """Nothing but single channels differs from the ideal model."""
+        free = self.off_lattice.any() or self.sensor_off_lattice
+        return self.layer is None and self.courses is None and not free
+
+    @property
+    def sensor_off_lattice(self) -> bool:
+        """Some q lies off the lattice, so that the optics sees frequencies between its points."""
+        steps = self.sensor / np.array(self.grid.lattice_step)
+        return bool((np.abs(steps - np.rint(steps)) > EXACT).any())
+
+    @property
+    def mean_information(self) -> float:
+        """Mean of |g|² v over all pixels of the object's grid, times the mean squared density."""
+        mean = float(self.channels.information.sum() / np.prod(self.window.pixels))
+        return mean if self.layer is None else mean * float((self.layer.density**2).mean())
 
     def with_channels(self, channels: Channels) -> GeneralModel:
         """The same measurement with channels judged anew."""
@@ -195,7 +213,7 @@ class GeneralModel:
             for n, step, q in zip(grid.shape[1:], grid.lattice_step, self.sensor[shot], strict=True)
         )
         edges = np.asarray(instrument.pixel)
-        transfer: ComplexArray = pixel_footprint(wave_y[:, None], wave_x, instrument.pixel)
+        transfer = pixel_footprint(wave_y[:, None], wave_x, instrument.pixel)
         first = (edges - grid.voxel[1:]) / 2
         if instrument.camera is not None:
             optics = instrument.optics

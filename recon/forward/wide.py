@@ -16,7 +16,7 @@ from recon.errors import InputError
 from recon.grid import Grid
 from recon.instrument import Instrument, OneDetector
 
-Array = NDArray[np.inexact]
+ComplexArray = NDArray[np.complexfloating]
 
 
 @dataclass(frozen=True)
@@ -77,12 +77,12 @@ class Window:
         """Every pixel of the grid exists."""
         return self.channels == self.pixels
 
-    def crop(self, planes: Array) -> Array:
+    def crop(self, planes: ComplexArray) -> ComplexArray:
         """(…, pixels) to (…, channels), a view."""
         (y, x), (cy, cx) = self.first, self.channels
         return planes[..., y : y + cy, x : x + cx]
 
-    def fill(self, planes: Array) -> Array:
+    def fill(self, planes: ComplexArray) -> ComplexArray:
         """The adjoint of `crop`: zeros for pixels that do not exist."""
         if self.whole:
             return planes
