@@ -1,0 +1,47 @@
+"""Spatially resolved NMR spectroscopic imaging with diamond quantum sensors.
+
+The names below are in the order in which data flow: describe, encode, simulate or open a record,
+reconstruct, hand over. Conventions: arrays (component, z, y, x), SI units, z = 0 at the diamond
+face. Research use only, not for diagnosis.
+"""
+
+from recon.errors import InputError, InputWarning
+from recon.grid import Grid
+from recon.instrument import Instrument
+from recon.specimen import Species, Specimen
+from recon.protocol import Protocol, SpectralAxis
+from recon.simulate import SimulationOptions, simulate
+from recon.record import Record, RecordWriter
+from recon.unknown import ComplexCube, SpeciesAmounts
+from recon.priors import Box, NonNegative, TotalVariation, WaveletSparsity
+from recon.solvers.penalised import Penalised
+from recon.solvers.ridge import Ridge
+from recon.reconstruct import reconstruct
+from recon.result import Cube, SpeciesMaps, load_result
+
+__all__ = [
+    "Box",
+    "ComplexCube",
+    "Cube",
+    "Grid",
+    "InputError",
+    "InputWarning",
+    "Instrument",
+    "NonNegative",
+    "Penalised",
+    "Protocol",
+    "Record",
+    "RecordWriter",
+    "Ridge",
+    "SimulationOptions",
+    "Species",
+    "SpeciesAmounts",
+    "SpeciesMaps",
+    "Specimen",
+    "SpectralAxis",
+    "TotalVariation",
+    "WaveletSparsity",
+    "load_result",
+    "reconstruct",
+    "simulate",
+]
