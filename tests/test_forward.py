@@ -5,7 +5,8 @@ from __future__ import annotations
 import numpy as np
 import pytest
 
-from recon.forward import BlockQuadratic, ForwardOperator, accumulate
+from recon.forward import BlockQuadratic, ForwardOperator, accumulate, normal
+from recon.forward.normal import normal_blocks
 from recon.symbol import Symbol
 from tests.cases import NOISE, registry
 from tests.dense import dense_matrix
@@ -100,3 +101,13 @@ def test_statistics_of_separate_shots_add():
     np.testing.assert_allclose(
         together.normal, whole.normal, rtol=1e-4, atol=1e-6 * np.abs(whole.normal).max()
     )
+
+
+def test_many_shots_by_convolution_equal_few_by_slices(monkeypatch):
+    """Two ways to sum shifted products of responses; the second is checked against A above."""
+    case = CASES[4]
+    operator = ForwardOperator(case.model)
+    _, slices = normal_blocks(operator)
+    monkeypatch.setattr(normal, "MANY", 0)
+    _, convolved = normal_blocks(operator)
+    assert np.abs(convolved - slices).max() <= 1e-6 * np.abs(slices).max()

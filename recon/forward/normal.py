@@ -3,12 +3,18 @@
 from __future__ import annotations
 
 import numpy as np
+import scipy.fft
 from numpy.typing import NDArray
 
 from recon.forward.layout import Layout
 from recon.forward.operator import ForwardOperator, fold
+from recon.forward.shot_tables import Window
 
 ComplexArray = NDArray[np.complexfloating]
+FloatArray = NDArray[np.floating]
+
+# Above this many shots of equal response a convolution is faster than adding slices.
+MANY = 80
 
 
 def normal_blocks(operator: ForwardOperator) -> tuple[Layout, ComplexArray]:
@@ -32,29 +38,60 @@ def normal_blocks(operator: ForwardOperator) -> tuple[Layout, ComplexArray]:
 
 
 def _camera_blocks(operator: ForwardOperator) -> ComplexArray:
-    """Shots with the same response differ by a shift: products once, then slices of their sum."""
+    """Shots with the same response differ by a shift: products once, then a sum of shifts."""
     tables, encoding = operator.tables, operator.model.encoding
     nz, ny, nx = operator.model.grid.shape
     upper = np.triu_indices(nz)
     total = np.zeros((len(upper[0]), 2 * ny, 2 * nx), np.complex64)
     strength = encoding.weight * np.abs(encoding.amplitude) ** 2
-    order = sorted(range(len(encoding)), key=lambda shot: (tables.keys[shot], strength[shot]))
-    last, product = None, np.zeros((0, 0, 0), np.complex64)
-    for shot in order:
-        key = (tables.keys[shot], float(strength[shot]))
-        if key != last:
-            kernel, conjugate = tables.response(shot)
-            factor = np.full((ny, nx), strength[shot], np.float32)
-            if not tables.fused:
-                factor *= np.abs(tables.transfer(shot)).astype(np.float32) ** 2
-            product, last = conjugate[upper[0]] * (kernel * factor)[upper[1]], key
-        rows, columns = tables.windows[shot]
-        seen = total[:, rows, columns]
-        seen += product
+    groups: dict[object, list[int]] = {}
+    for shot, key in enumerate(tables.keys):
+        groups.setdefault(key, []).append(shot)
+    for shots in groups.values():
+        kernel, conjugate = tables.response(shots[0])
+        if not tables.fused:
+            kernel = kernel * np.abs(tables.transfer(shots[0])).astype(np.float32) ** 2
+        add = _add_by_transform if len(shots) > MANY else _add_shifted
+        windows = [tables.windows[shot] for shot in shots]
+        add(total, conjugate, kernel, windows, strength[shots])
     total *= (operator.footprint**2).astype(np.float32)
     normal = np.zeros((nz, nz, ny, nx), np.complex64)
     normal[upper] = fold(total, (ny, nx))
     return normal
+
+
+def _add_shifted(
+    total: ComplexArray,
+    left: ComplexArray,
+    right: ComplexArray,
+    windows: list[Window],
+    strength: FloatArray,
+) -> None:
+    """Add strength · left_z · right_z' at every window, for z ≤ z'."""
+    upper = np.triu_indices(len(left))
+    product = left[upper[0]] * right[upper[1]]
+    for (rows, columns), factor in zip(windows, strength, strict=True):
+        seen = total[:, rows, columns]
+        seen += product * np.float32(factor)
+
+
+def _add_by_transform(
+    total: ComplexArray,
+    left: ComplexArray,
+    right: ComplexArray,
+    windows: list[Window],
+    strength: FloatArray,
+) -> None:
+    """The same as a convolution with the table of windows, in double precision."""
+    shape = total.shape[1:]
+    places = np.zeros(shape)
+    for (rows, columns), factor in zip(windows, strength, strict=True):
+        places[rows.start, columns.start] += factor
+    table = scipy.fft.fft2(places)
+    for entry, (low, high) in enumerate(zip(*np.triu_indices(len(left)), strict=True)):
+        product = scipy.fft.fft2(left[low].astype(complex) * right[high], shape)
+        product *= table
+        total[entry] += scipy.fft.ifft2(product, overwrite_x=True).astype(np.complex64)
 
 
 def _aliased_blocks(operator: ForwardOperator, layout: Layout) -> ComplexArray:

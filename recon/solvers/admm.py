@@ -23,7 +23,6 @@ from numpy.typing import NDArray
 from recon.errors import InputError
 from recon.solvers.loop import Residuals, relative
 from recon.solvers.problem import Problem
-from recon.symbol import Symbol
 
 Array = NDArray[np.inexact]
 
@@ -89,11 +88,12 @@ class ADMM:
         """Zero duals; u from the guess, or from one damped least-squares step."""
         quadratic = problem.quadratic
         penalty = 1.0 if self.penalty is None else self.penalty
-        if guess is None:
-            guess = quadratic.step(Symbol(penalty))(quadratic.linear)
-        guess = guess.astype(quadratic.dtype, copy=False)
-        u = [part.term.analyse(guess) for part in problem.terms]
-        return ADMMState(u, [np.zeros_like(one) for one in u], penalty)
+        step = _exact_step(problem, penalty)
+        guess = step(quadratic.linear) if guess is None else guess
+        u = [part.term.analyse(guess.astype(quadratic.dtype, copy=False)) for part in problem.terms]
+        state = ADMMState(u, [np.zeros_like(one) for one in u], penalty)
+        state._step = step
+        return state
 
     def advance(self, problem: Problem, state: ADMMState) -> ADMMState:
         """One iteration, in place."""
@@ -149,8 +149,12 @@ class ADMM:
                 state.d = [d / d.real.dtype.type(factor) for d in state.d]
                 state._step = None
         if state._step is None:
-            symbols = (part.term.symbol for part in problem.terms)
-            state._step = problem.quadratic.step(reduce(add, symbols).scaled(state.penalty))
+            state._step = _exact_step(problem, state.penalty)
+
+
+def _exact_step(problem: Problem, penalty: float) -> Callable[[Array], Array]:
+    symbols = (part.term.symbol for part in problem.terms)
+    return problem.quadratic.step(reduce(add, symbols).scaled(penalty))
 
 
 def _squared(values: Array) -> float:
