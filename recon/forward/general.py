@@ -46,7 +46,7 @@ class GeneralOperator:
         self.object_shape = (ideal.components, *model.grid.shape)
         self.sample_shape = (len(model), len(ideal.basis), *model.window.channels)
         self._scale = 1 / np.prod(model.grid.shape[1:]) * np.prod(model.window.pixels)
-        self._tables = _Tables(model, self.dtype)
+        self.tables = _Tables(model, self.dtype)
 
     def apply(self, objects: ComplexArray) -> ComplexArray:
         """A x.
@@ -60,8 +60,8 @@ class GeneralOperator:
         samples = np.empty(self.sample_shape, self.dtype)
         for shot in range(len(self.model)):
             planes = self._planes(shot, source)
-            planes *= self._tables.channel_factor(shot) * self.dtype.type(self._scale)
-            basis = self._tables.basis(shot)
+            planes *= self.tables.channel_factor(shot) * self.dtype.type(self._scale)
+            basis = self.tables.basis(shot)
             samples[shot] = (basis @ planes.reshape(len(planes), -1)).reshape(samples.shape[1:])
         return samples
 
@@ -81,31 +81,23 @@ class GeneralOperator:
 
     def back_project(self, shots: Iterable[tuple[int, ComplexArray]]) -> ComplexArray:
         """Sum of Aᴴ over numbered shots with samples (times, channels y, channels x)."""
-        sink = _Sink(self._tables, self.object_shape)
+        sink = _Sink(self.tables, self.object_shape)
         for shot, samples in shots:
             flat = samples.astype(self.dtype, copy=False).reshape(len(samples), -1)
-            planes = (self._tables.basis(shot).conj().T @ flat).reshape(-1, *samples.shape[1:])
+            planes = (self.tables.basis(shot).conj().T @ flat).reshape(-1, *samples.shape[1:])
             self.back_project_planes(shot, planes, sink)
         return sink.total()
 
     def back_project_planes(self, shot: int, planes: ComplexArray, sink: _Sink) -> None:
         """Add Aᴴ of samples that are already projected on the components' time courses."""
-        factor = self._tables.channel_factor(shot)
+        factor = self.tables.channel_factor(shot)
         self._back(shot, planes * factor.conj(), sink)
 
-    def normal(self, objects: ComplexArray, information: FloatArray | None = None) -> ComplexArray:
-        """Aᴴ W A x, the times summed in closed form.
-
-        Parameters
-        ----------
-        information
-            |g|² v of every channel in place of the model's own, (channels y, channels x).
-        """
+    def normal(self, objects: ComplexArray) -> ComplexArray:
+        """Aᴴ W A x, the times summed in closed form."""
         model = self.model
-        if information is None:
-            information = model.channels.information
-        share = (information * self._scale).astype(self.dtype.char.lower())
-        source, sink = self._source(objects), _Sink(self._tables, self.object_shape)
+        share = (model.channels.information * self._scale).astype(self.dtype.char.lower())
+        source, sink = self._source(objects), _Sink(self.tables, self.object_shape)
         common = None if model.courses is not None else model.gram(0).astype(self.dtype)
         for shot, weight in enumerate(model.weight):
             planes = self._planes(shot, source)
@@ -120,7 +112,7 @@ class GeneralOperator:
 
     def noise(self, random: np.random.Generator) -> ComplexArray:
         """A draw of Aᴴ W n for noise n of the stated variance: its covariance is AᴴWA."""
-        model, sink = self.model, _Sink(self._tables, self.object_shape)
+        model, sink = self.model, _Sink(self.tables, self.object_shape)
         kind = self.dtype.char.lower()
         for shot, weight in enumerate(model.weight):
             shape = (self.object_shape[0], *model.window.channels, 2)
@@ -137,20 +129,20 @@ class GeneralOperator:
             raise InputError(
                 f"object has shape {objects.shape}, not {self.object_shape}", "operator"
             )
-        return _Source(self._tables, objects.astype(self.dtype, copy=False))
+        return _Source(self.tables, objects.astype(self.dtype, copy=False))
 
     def _planes(self, shot: int, source: _Source) -> ComplexArray:
         """What the channels of ideal gain see of each component, up to a phase per channel."""
         field = source.field(shot)
-        layer = self._tables.density
+        layer = self.tables.density
         if layer is None:
-            field *= self._tables.response(shot)
+            field *= self.tables.response(shot)
         else:
-            field *= self._tables.winding_response(shot)
+            field *= self.tables.winding_response(shot)
             plane = scipy.fft.ifft2(field, overwrite_x=True)
             plane *= layer
             field = scipy.fft.fft2(plane, overwrite_x=True)
-            field *= self._tables.transfer(shot)
+            field *= self.tables.transfer(shot)
         window = self.model.window
         return window.crop(scipy.fft.ifft2(fold(field, window.pixels), overwrite_x=True))
 
@@ -160,15 +152,15 @@ class GeneralOperator:
         field = scipy.fft.fft2(window.fill(planes))
         if window.binning != (1, 1):
             field = np.tile(field, (1, *window.binning))
-        layer = self._tables.density
+        layer = self.tables.density
         if layer is None:
-            field *= self._tables.response(shot).conj()
+            field *= self.tables.response(shot).conj()
         else:
-            field *= self._tables.transfer(shot).conj()
+            field *= self.tables.transfer(shot).conj()
             plane = scipy.fft.ifft2(field, overwrite_x=True)
             plane *= layer
             field = scipy.fft.fft2(plane, overwrite_x=True)
-            field *= self._tables.winding_response(shot).conj()
+            field *= self.tables.winding_response(shot).conj()
         sink.add(shot, field)
 
 
