@@ -9,13 +9,15 @@ and drops out of the normal operator.
 
 from __future__ import annotations
 
-from collections.abc import Iterable
+from collections.abc import Iterable, Iterator
+from copy import copy
 
 import numpy as np
 import scipy.fft
 from numpy.typing import NDArray
 
 from recon.errors import InputError
+from recon.forward.channels import Channels
 from recon.forward.general_model import GeneralModel
 from recon.forward.off_lattice import winding
 from recon.forward.operator import fold
@@ -56,14 +58,27 @@ class GeneralOperator:
         InputError
             The object's shape is not `object_shape`.
         """
-        source = self._source(objects)
         samples = np.empty(self.sample_shape, self.dtype)
+        for shot, one in enumerate(self.shots(objects)):
+            samples[shot] = one
+        return samples
+
+    def shots(self, objects: ComplexArray) -> Iterator[ComplexArray]:
+        """A x shot after shot, each (times, channels y, channels x)."""
+        source = self._source(objects)
         for shot in range(len(self.model)):
             planes = self._planes(shot, source)
             planes *= self.tables.channel_factor(shot) * self.dtype.type(self._scale)
             basis = self.tables.basis(shot)
-            samples[shot] = (basis @ planes.reshape(len(planes), -1)).reshape(samples.shape[1:])
-        return samples
+            yield (basis @ planes.reshape(len(planes), -1)).reshape(self.sample_shape[1:])
+
+    def with_channels(self, channels: Channels) -> GeneralOperator:
+        """The same operator with channels judged anew; it shares the tables."""
+        other = copy(self)
+        other.model = self.model.with_channels(channels)
+        other.tables = copy(self.tables)
+        other.tables.model = other.model
+        return other
 
     def adjoint(self, samples: ComplexArray) -> ComplexArray:
         """Aᴴ y.

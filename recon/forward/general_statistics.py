@@ -16,6 +16,7 @@ from recon.errors import InputError
 from recon.forward.general import GeneralOperator
 
 ComplexArray = NDArray[np.complexfloating]
+FloatArray = NDArray[np.floating]
 
 Batches = Iterable[tuple[slice, ComplexArray]]
 
@@ -69,6 +70,22 @@ def gather(
 
     linear = operator.back_project(shots())
     return GeneralStatistics(linear, energy, model.sample_count)
+
+
+def channel_residuals(operator: GeneralOperator, x: ComplexArray, batches: Batches) -> FloatArray:
+    """Root mean square residual of every channel in units of its stated noise.
+
+    About 1 where the model explains a channel; 0 for dead channels; (channels y, channels x).
+    Batches must come in the order of the shots.
+    """
+    model = operator.model
+    power = np.zeros(model.channels.shape)
+    predicted = operator.shots(x)
+    for shot, samples in each_shot(operator, batches):
+        rest = samples - next(predicted)
+        power += model.weight[shot] * (rest.real**2 + rest.imag**2).sum(axis=0)
+    count = max(1, int(np.count_nonzero(model.weight))) * operator.sample_shape[1]
+    return np.sqrt(power * model.channels.weight / count)
 
 
 def each_shot(
