@@ -12,7 +12,7 @@ from recon.forward.blocks import BlockQuadratic
 from recon.priors.base import Frame, Prior, Term
 from recon.solvers.admm import ADMM, ADMMState
 from recon.solvers.estimate import Estimate, Progress, silent
-from recon.solvers.loop import Residuals, Solution, Stopping, solve
+from recon.solvers.loop import Reason, Residuals, Solution, Stopping, solve
 from recon.solvers.problem import Problem, Weighted
 from recon.solvers.replicas import Replicas, Scatter
 from recon.solvers.weight import SteinRisk, WeightRule
@@ -99,7 +99,10 @@ class _Run:
         def watch(iteration: int, residuals: Residuals) -> None:
             self.progress(f"λ {weight:.3g}, iteration {iteration}", None)
 
-        return solve(problem, self.settings.method, stopping, state=state, watch=watch)
+        solution = solve(problem, self.settings.method, stopping, state=state, watch=watch)
+        if solution.reason is Reason.INTERRUPTED:
+            raise KeyboardInterrupt
+        return solution
 
     def searcher(self) -> Callable[[float, Array], Array]:
         """A rough solver that starts where it last ended."""
