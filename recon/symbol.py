@@ -1,4 +1,4 @@
-"""Normal operators that fit the blocks: a function of lateral frequency plus a matrix along z."""
+"""Normal operators that fit the blocks: a function of lateral frequency plus matrices along z."""
 
 from __future__ import annotations
 
@@ -21,7 +21,8 @@ class Symbol:
     lateral
         (ny, nx) in FFT order, or a scalar.
     axial
-        (nz, nz) symmetric, or None.
+        (nz, nz) symmetric, or (nz, nz, ny, nx) where it differs from frequency to frequency, or
+        None.
     """
 
     lateral: FloatArray | float
@@ -30,7 +31,7 @@ class Symbol:
     def __add__(self, other: Symbol) -> Symbol:
         axial = self.axial if other.axial is None else other.axial
         if self.axial is not None and other.axial is not None:
-            axial = self.axial + other.axial
+            axial = _together(self.axial, other.axial)
         return Symbol(self.lateral + other.lateral, axial)
 
     def scaled(self, factor: float) -> Symbol:
@@ -48,9 +49,22 @@ class Symbol:
             image = scipy.fft.irfft2(spectrum, x.shape[-2:])
         else:
             image = scipy.fft.ifft2(scipy.fft.fft2(x) * lateral)
-        if self.axial is not None:
-            image = image + np.einsum("zw,cwyx->czyx", self.axial.astype(kind), x)
-        return image
+        if self.axial is None:
+            return image
+        axial = self.axial.astype(kind)
+        if axial.ndim == 2:
+            return image + np.einsum("zw,cwyx->czyx", axial, x)
+        spectrum = np.einsum("zwyx,cwyx->czyx", axial, scipy.fft.fft2(x))
+        coupled = scipy.fft.ifft2(spectrum, overwrite_x=True)
+        return image + (coupled.real if np.isrealobj(x) else coupled)
+
+
+def _together(one: FloatArray, other: FloatArray) -> FloatArray:
+    """Sum of axial matrices, whether they differ between frequencies or not."""
+    if one.ndim == other.ndim:
+        return one + other
+    few, many = (one, other) if one.ndim == 2 else (other, one)
+    return few[..., None, None] + many
 
 
 IDENTITY = Symbol(1.0)

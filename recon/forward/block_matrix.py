@@ -66,12 +66,13 @@ class BlockMatrix:
     def shifted(
         self, diagonal: FloatArray | float, coupling: FloatArray | None = None
     ) -> BlockMatrix:
-        """Add a diagonal (q, blocks) or scalar and a matrix (q, q) common to all blocks."""
+        """Add a diagonal (q, blocks) or scalar and matrices (q, q) or (q, q, blocks)."""
         entries = self.entries.copy()
         index = np.arange(self.size)
         entries[:, index, index] += np.asarray(diagonal, entries.real.dtype)
         if coupling is not None:
-            entries += coupling.astype(entries.real.dtype)[:, :, None]
+            coupling = coupling.reshape(self.size, self.size, -1)
+            entries += coupling.astype(entries.real.dtype)
         return BlockMatrix(entries, self.batch)
 
     def eigen(self) -> tuple[FloatArray, ComplexArray]:

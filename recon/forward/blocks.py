@@ -208,9 +208,8 @@ class BlockQuadratic:
         return BlockMatrix(entries.reshape(*entries.shape[:3], -1), batch)
 
     def _spread(self, symbol: Symbol) -> tuple[FloatArray | float, FloatArray | None]:
-        """A symbol in block order: diagonal (q, blocks) or scalar, and coupling (q, q)."""
-        repeats = self.matrix.size // self.shape[1]
-        coupling = None if symbol.axial is None else np.kron(np.eye(repeats), symbol.axial)
+        """A symbol in block order: diagonal (q, blocks) or scalar, coupling (q, q[, blocks])."""
+        coupling = None if symbol.axial is None else self._coupling(symbol.axial)
         if isinstance(symbol.lateral, float | int):
             return symbol.lateral, coupling
         plane = np.asarray(symbol.lateral)[..., : self._columns]
@@ -218,3 +217,17 @@ class BlockQuadratic:
         one: Any = self.layout.gather(tall[None])
         diagonal: FloatArray = np.tile(one.reshape(len(one), -1), (self.matrix.size // len(one), 1))
         return diagonal, coupling
+
+    def _coupling(self, axial: FloatArray) -> FloatArray:
+        """Matrices along z in block order, the same for every component."""
+        nz, size = self.shape[1], self.matrix.size
+        if axial.ndim == 2:
+            return np.kron(np.eye(size // nz), axial)
+        planes: Any = axial[..., : self._columns]
+        aliases = int(np.prod(self.layout.aliases))
+        gathered = self.layout.gather(planes).reshape(nz, aliases, nz, -1)
+        joint = np.zeros((size // nz // aliases, aliases, nz) * 2 + gathered.shape[-1:])
+        for component in range(len(joint)):
+            for alias in range(aliases):
+                joint[component, alias, :, component, alias] = gathered[:, alias]
+        return joint.reshape(size, size, -1)

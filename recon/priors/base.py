@@ -49,10 +49,13 @@ class Term(ABC):
         DᴴD.
     constraint
         R is 0 or infinite: the weight means nothing.
+    auxiliary
+        R is itself a minimum over an auxiliary field; see `image_near`.
     """
 
     symbol: Symbol = IDENTITY
     constraint: bool = False
+    auxiliary: bool = False
 
     @property
     def tight(self) -> bool:
@@ -63,6 +66,10 @@ class Term(ABC):
     @abstractmethod
     def analyse(self, x: Array) -> Array:
         """D x."""
+
+    def image_near(self, x: Array, target: Array) -> Array:
+        """D x; with an auxiliary field, the image of x under the field nearest the target."""
+        return self.analyse(x)
 
     @abstractmethod
     def adjoint(self, u: Array) -> Array:
@@ -109,7 +116,7 @@ def soft_threshold(u: Array, threshold: Any) -> Array:
     return u * size
 
 
-def group_soft_threshold(u: Array, threshold: float, axis: int = 0) -> Array:
+def group_soft_threshold(u: Array, threshold: Any, axis: int = 0) -> Array:
     """Shrink vectors along an axis by their Euclidean length: the prox of threshold · ‖u‖₂."""
     length = np.sqrt((u.real**2 + u.imag**2).sum(axis) if np.iscomplexobj(u) else (u**2).sum(axis))
     np.maximum(length, np.finfo(length.dtype).tiny, out=length)

@@ -13,7 +13,14 @@ import numpy as np
 import pywt
 
 from recon.errors import InputError
-from recon.priors.base import Array, Frame, Shape, Term, soft_threshold
+from recon.priors.base import (
+    Array,
+    Frame,
+    Shape,
+    Term,
+    group_soft_threshold,
+    soft_threshold,
+)
 
 
 @dataclass(frozen=True)
@@ -26,13 +33,17 @@ class WaveletSparsity:
         Name of an orthogonal discrete wavelet of PyWavelets.
     levels
         Number of levels at most; fewer where the sides do not halve so often.
+    joint
+        All components share their places: one Euclidean length over them per coefficient.
     """
 
     wavelet: str = "db4"
     levels: int = 4
+    joint: bool = False
 
     def __str__(self) -> str:
-        return f"sparse in {self.wavelet} wavelets across each plane"
+        shared = " shared by all components" if self.joint else ""
+        return f"sparse in {self.wavelet} wavelets across each plane{shared}"
 
     def on(self, frame: Frame) -> WaveletTerm:
         """Bind to an unknown.
@@ -49,14 +60,17 @@ class WaveletSparsity:
             raise InputError(
                 f"wavelet '{self.wavelet}' is not orthogonal", "wavelet prior", "use db4 or sym8"
             )
-        return WaveletTerm(bank, possible_levels(frame.shape, bank.dec_len, self.levels))
+        return WaveletTerm(
+            bank, possible_levels(frame.shape, bank.dec_len, self.levels), self.joint
+        )
 
 
 class WaveletTerm(Term):
     """W and its ℓ1 norm; coefficients keep the unknown's shape (pyramid layout)."""
 
-    def __init__(self, bank: Any, levels: int) -> None:
+    def __init__(self, bank: Any, levels: int, joint: bool = False) -> None:
         self._bank = bank
+        self._joint = joint
         self._levels = levels
 
     def analyse(self, x: Array) -> Array:
@@ -91,11 +105,13 @@ class WaveletTerm(Term):
 
     def value(self, u: Array) -> float:
         ny, nx = self._coarse(u)
-        return float(np.abs(u).sum() - np.abs(u[..., :ny, :nx]).sum())
+        size = np.sqrt((np.abs(u) ** 2).sum(axis=0)) if self._joint else np.abs(u)
+        return float(size.sum() - size[..., :ny, :nx].sum())
 
     def prox(self, u: Array, step: float) -> Array:
         ny, nx = self._coarse(u)
-        shrunk = soft_threshold(u, np.asarray(step, u.real.dtype))
+        shrink = group_soft_threshold if self._joint else soft_threshold
+        shrunk = shrink(u, np.asarray(step, u.real.dtype))
         shrunk[..., :ny, :nx] = u[..., :ny, :nx]
         return shrunk
 

@@ -100,18 +100,18 @@ class ADMM:
         self._balance(problem, state)
         quadratic, rho, alpha = problem.quadratic, state.penalty, self.over_relaxation
         kind = quadratic.dtype.type(0).real.dtype.type
+        targets = [u - d for u, d in zip(state.u, state.d, strict=True)]
         pulled = [
-            part.term.adjoint(u - d)
-            for part, u, d in zip(problem.terms, state.u, state.d, strict=True)
+            part.term.adjoint(target) for part, target in zip(problem.terms, targets, strict=True)
         ]
         right: Any = reduce(add, pulled)
-        right *= kind(rho)
+        right = right * kind(rho)
         right += quadratic.linear
         assert state._step is not None
         x = state.x = state._step(right)
         primal = dual = primal_scale = dual_scale = 0.0
         for place, part in enumerate(problem.terms):
-            image = part.term.analyse(x)
+            image = part.term.image_near(x, targets[place])
             before, d = state.u[place], state.d[place]
             relaxed = kind(alpha) * image + kind(1 - alpha) * before
             relaxed += d
