@@ -13,7 +13,17 @@ from recon.protocol import Protocol, SpectralAxis
 from recon.simulate import SimulationOptions, simulate
 from recon.record import Record, RecordWriter
 from recon.unknown import ComplexCube, SpeciesAmounts
-from recon.priors import Box, NonNegative, TotalVariation, WaveletSparsity
+from recon.priors import (
+    Box,
+    LocalLowRank,
+    LowRank,
+    NonNegative,
+    Support,
+    TotalGeneralisedVariation,
+    TotalVariation,
+    UndecimatedWaveletSparsity,
+    WaveletSparsity,
+)
 from recon.solvers.penalised import Penalised
 from recon.solvers.ridge import Ridge
 from recon.reconstruct import reconstruct
@@ -27,6 +37,8 @@ __all__ = [
     "InputError",
     "InputWarning",
     "Instrument",
+    "LocalLowRank",
+    "LowRank",
     "NonNegative",
     "Penalised",
     "Protocol",
@@ -39,7 +51,10 @@ __all__ = [
     "SpeciesMaps",
     "Specimen",
     "SpectralAxis",
+    "Support",
+    "TotalGeneralisedVariation",
     "TotalVariation",
+    "UndecimatedWaveletSparsity",
     "WaveletSparsity",
     "load_result",
     "reconstruct",

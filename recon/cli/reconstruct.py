@@ -8,7 +8,17 @@ import click
 import numpy as np
 
 from recon.cli.common import progress_line
-from recon.priors import NonNegative, Prior, TotalVariation, WaveletSparsity
+from recon.errors import InputError
+from recon.priors import (
+    LocalLowRank,
+    LowRank,
+    NonNegative,
+    Prior,
+    TotalGeneralisedVariation,
+    TotalVariation,
+    UndecimatedWaveletSparsity,
+    WaveletSparsity,
+)
 from recon.reconstruct import reconstruct
 from recon.record import Record
 from recon.result import Cube, Result, SpeciesMaps
@@ -19,19 +29,30 @@ from recon.solvers.ridge import Ridge
 from recon.solvers.weight import Fixed, SteinRisk
 from recon.unknown import ComplexCube, SpeciesAmounts, Unknown
 
-PRIORS: dict[str, tuple[Prior, ...]] = {
-    "total-variation": (TotalVariation(),),
-    "joint-total-variation": (TotalVariation(joint=True),),
-    "wavelet": (WaveletSparsity(),),
-    "ridge": (),
+PRIORS: dict[str, Prior] = {
+    "total-variation": TotalVariation(),
+    "joint-total-variation": TotalVariation(joint=True),
+    "total-generalised-variation": TotalGeneralisedVariation(),
+    "wavelet": WaveletSparsity(),
+    "joint-wavelet": WaveletSparsity(joint=True),
+    "undecimated-wavelet": UndecimatedWaveletSparsity(),
+    "low-rank": LowRank(),
+    "local-low-rank": LocalLowRank(),
 }
+RIDGE = "ridge"
 
 
 @click.command("reconstruct")
 @click.argument("record", type=click.Path(path_type=Path))
 @click.option("-o", "--output", type=click.Path(path_type=Path), default=Path("result.h5"))
 @click.option("--cube", is_flag=True, help="The complex cube over time, without a line list.")
-@click.option("--prior", type=click.Choice(list(PRIORS)), default=None, help="What is assumed.")
+@click.option(
+    "--prior",
+    "priors",
+    type=click.Choice([RIDGE, *PRIORS]),
+    multiple=True,
+    help="What is assumed; give several to combine them.",
+)
 @click.option("--weight", type=float, default=None, help="Of the prior; by default it is chosen.")
 @click.option("--replicas", type=int, default=50, show_default=True, help="For errors; 0: none.")
 @click.option("--memory-limit-gib", type=float, default=8.0, show_default=True)
@@ -39,19 +60,19 @@ def verb(
     record: Path,
     output: Path,
     cube: bool,
-    prior: str | None,
+    priors: tuple[str, ...],
     weight: float | None,
     replicas: int,
     memory_limit_gib: float,
 ) -> None:
     """Amounts of the RECORD's species in mM, or its complex cube, with standard errors."""
     unknown: Unknown = ComplexCube() if cube else SpeciesAmounts()
-    name = prior or ("joint-total-variation" if cube else "total-variation")
+    names = priors or (("joint-total-variation" if cube else "total-variation"),)
     with progress_line() as line:
         result = reconstruct(
             Record.open(record),
             unknown,
-            estimator_named(name, unknown, weight, replicas),
+            estimator_named(names, unknown, weight, replicas),
             progress=line,
             memory_limit_gib=memory_limit_gib,
         )
@@ -61,15 +82,24 @@ def verb(
 
 
 def estimator_named(
-    name: str, unknown: Unknown, weight: float | None = None, replicas: int = 50
+    names: tuple[str, ...], unknown: Unknown, weight: float | None = None, replicas: int = 50
 ) -> Estimator:
-    """The estimator behind a prior's name; amounts are also taken as non-negative."""
-    if name == "ridge":
+    """The estimator behind priors' names; amounts are also taken as non-negative.
+
+    Raises
+    ------
+    InputError
+        Ridge is combined with another prior.
+    """
+    if RIDGE in names:
+        if len(names) > 1:
+            raise InputError("ridge is solved directly", "--prior", "give it alone")
         return Ridge(weight)
     bounds: tuple[Prior, ...] = (NonNegative(),) if unknown.real else ()
     rule = SteinRisk() if weight is None else Fixed(weight)
     errors = Replicas(replicas) if replicas else None
-    return Penalised(PRIORS[name] + bounds, weight=rule, replicas=errors)
+    priors = tuple(PRIORS[name] for name in names)
+    return Penalised(priors + bounds, weight=rule, replicas=errors)
 
 
 def summary(result: Result) -> str:
