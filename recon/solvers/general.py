@@ -1,6 +1,6 @@
 """The quadratic data term where the blocks are not exact.
 
-    q(x) = ½ ‖W^{1/2}(y − A x)‖²,   G = AᴴWA by a pass over the shots
+    q(x) = ½ ‖W^{1/2}(y − A x)‖²,   G = AᴴWA by a pass over the shots, or by larger blocks
 
 The quadratic step (G + S)⁻¹ r is an object's choice: conjugate gradients with block solves as
 preconditioner, or one majorise–minimise update, which keeps the block solve direct.
@@ -8,6 +8,7 @@ preconditioner, or one majorise–minimise update, which keeps the block solve d
 
 from __future__ import annotations
 
+from collections.abc import Callable
 from copy import copy
 from dataclasses import dataclass, field
 from functools import cached_property
@@ -26,12 +27,14 @@ from recon.forward.local_information import local_information
 from recon.forward.normal import normal_blocks
 from recon.forward.operator import ForwardOperator
 from recon.forward.statistics import Statistics
+from recon.forward.toeplitz import ToeplitzNormal, is_toeplitz
 from recon.solvers.conjugate_gradients import System, iterate
 from recon.solvers.graded import GradedBlocks
 from recon.solvers.loop import Stopping
 from recon.symbol import Symbol
 
 Array = NDArray[np.inexact]
+ComplexArray = NDArray[np.complexfloating]
 FloatArray = NDArray[np.floating]
 
 
@@ -155,7 +158,8 @@ class GeneralQuadratic:
         """The data term for unknowns counted in units of size `unit`, (components,)."""
         other = GeneralQuadratic(self.operator, self.statistics, self.real, self.rule)
         other.unit = (self.unit * unit).astype(np.float32)
-        other.__dict__.update(_blocks=self._blocks, _local=self._local)
+        shared = {name: getattr(self, name) for name in ("_blocks", "_local", "_apply_normal")}
+        other.__dict__.update(shared)
         return other
 
     def value(self, x: Array) -> float:
@@ -169,7 +173,7 @@ class GeneralQuadratic:
 
     def normal(self, x: Array) -> Array:
         """G x."""
-        image = self.operator.normal(x * self._factor)
+        image = self._apply_normal(x * self._factor)
         image *= self._factor
         return self._kept(image)
 
@@ -239,6 +243,12 @@ class GeneralQuadratic:
     @property
     def _factor(self) -> FloatArray:
         return self.unit[:, None, None, None]
+
+    @cached_property
+    def _apply_normal(self) -> Callable[[ComplexArray], ComplexArray]:
+        """G by blocks of twice the size where they are exact, else by a pass over the shots."""
+        operator = self.operator
+        return ToeplitzNormal(operator) if is_toeplitz(operator.model) else operator.normal
 
     @cached_property
     def _local(self) -> FloatArray:
