@@ -88,10 +88,10 @@ class BlockQuadratic:
         """G x − b."""
         return self.normal(x) - self.linear
 
-    def step(self, symbol: Symbol) -> Callable[[Array], Array]:
-        """The map r ↦ (G + symbol)⁻¹ r."""
+    def step(self, symbol: Symbol) -> Callable[..., Array]:
+        """The map r ↦ (G + symbol)⁻¹ r; a start, which inexact data terms use, is ignored."""
         inverse = self.matrix.shifted(*self._spread(symbol)).inverse()
-        return lambda right: self.filtered(inverse, right)
+        return lambda right, start=None: self.filtered(inverse, right)
 
     def scaled(self, unit: FloatArray) -> BlockQuadratic:
         """The data term for unknowns counted in units of size `unit`, (components,)."""

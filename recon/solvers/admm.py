@@ -11,7 +11,6 @@ Source: Boyd, Parikh, Chu, Peleato & Eckstein, Foundations and Trends in Machine
 
 from __future__ import annotations
 
-from collections.abc import Callable
 from dataclasses import dataclass, field
 from functools import reduce
 from operator import add
@@ -22,7 +21,7 @@ from numpy.typing import NDArray
 
 from recon.errors import InputError
 from recon.solvers.loop import Residuals, relative
-from recon.solvers.problem import Problem
+from recon.solvers.problem import Problem, Step
 
 Array = NDArray[np.inexact]
 
@@ -38,7 +37,7 @@ class ADMMState:
     x: Array | None = None
     primal: float = np.inf
     dual: float = np.inf
-    _step: Callable[[Array], Array] | None = field(default=None, repr=False)
+    _step: Step | None = field(default=None, repr=False)
 
     def copy(self) -> ADMMState:
         """A state that further iterations leave alone."""
@@ -108,7 +107,7 @@ class ADMM:
         right = right * kind(rho)
         right += quadratic.linear
         assert state._step is not None
-        x = state.x = state._step(right)
+        x = state.x = state._step(right, state.x)
         primal = dual = primal_scale = dual_scale = 0.0
         for place, part in enumerate(problem.terms):
             image = part.term.image_near(x, targets[place])
@@ -152,7 +151,7 @@ class ADMM:
             state._step = _exact_step(problem, state.penalty)
 
 
-def _exact_step(problem: Problem, penalty: float) -> Callable[[Array], Array]:
+def _exact_step(problem: Problem, penalty: float) -> Step:
     symbols = (part.term.symbol for part in problem.terms)
     return problem.quadratic.step(reduce(add, symbols).scaled(penalty))
 

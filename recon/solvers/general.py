@@ -31,17 +31,12 @@ from recon.forward.toeplitz import ToeplitzNormal, is_toeplitz
 from recon.solvers.conjugate_gradients import System, iterate
 from recon.solvers.graded import GradedBlocks
 from recon.solvers.loop import Stopping
+from recon.solvers.problem import Step
 from recon.symbol import Symbol
 
 Array = NDArray[np.inexact]
 ComplexArray = NDArray[np.complexfloating]
 FloatArray = NDArray[np.floating]
-
-
-class Step(Protocol):
-    """A solved (or improved) quadratic step: (r, start) ↦ x with (G + S) x ≈ r."""
-
-    def __call__(self, right: Array, start: Array | None = None) -> Array: ...
 
 
 class StepRule(Protocol):

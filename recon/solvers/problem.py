@@ -2,7 +2,6 @@
 
 from __future__ import annotations
 
-from collections.abc import Callable
 from dataclasses import dataclass
 from typing import Any, Protocol
 
@@ -13,6 +12,12 @@ from recon.priors.base import Term
 from recon.symbol import Symbol
 
 Array = NDArray[np.inexact]
+
+
+class Step(Protocol):
+    """A quadratic step; data terms whose step is exact ignore the start."""
+
+    def __call__(self, right: Array, start: Array | None = None) -> Array: ...
 
 
 class Quadratic(Protocol):
@@ -44,8 +49,8 @@ class Quadratic(Protocol):
     def gradient(self, x: Array) -> Array:
         """G x − b."""
 
-    def step(self, symbol: Symbol) -> Callable[[Array], Array]:
-        """The map r ↦ (G + symbol)⁻¹ r."""
+    def step(self, symbol: Symbol) -> Step:
+        """The map r ↦ (G + symbol)⁻¹ r, exact or improved from a start."""
 
 
 @dataclass(frozen=True)
