@@ -91,6 +91,7 @@ class Dense:
         samples = y.reshape(shape)
         statistics = gather(operator, [(slice(0, 6), samples[:6]), (slice(6, 14), samples[6:])])
         plain = GeneralQuadratic(operator, statistics, real)
+        self.voxel = example.grid.voxel
         self.unit = 1 / np.sqrt(plain.diagonal().mean(axis=1))
         self.quadratic = plain.scaled(self.unit)
         scale = np.repeat(self.unit, example.grid.size)
