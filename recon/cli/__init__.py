@@ -7,7 +7,15 @@ import warnings
 
 import click
 
-from recon.cli import demo, make_protocol, make_specimen, reconstruct, show, simulate
+from recon.cli import (
+    demo,
+    hand_over,
+    make_protocol,
+    make_specimen,
+    reconstruct,
+    show,
+    simulate,
+)
 from recon.errors import InputError, InputWarning
 
 VERBS = (
@@ -16,6 +24,7 @@ VERBS = (
     make_protocol.verb,
     simulate.verb,
     reconstruct.verb,
+    hand_over.verb,
     show.verb,
 )
 

@@ -31,10 +31,12 @@ from numpy.typing import NDArray
 from recon.errors import InputError
 from recon.files import atomic_path
 from recon.grid import Grid
+from recon.handover.placement import INSTRUMENT, Placement
 
 INTENT_ESTIMATE = 1001
 INTENT_LABEL = 1002
 UNIT_MILLIMETRE = 2
+UNIT_SECOND = 8
 UNIT_HERTZ = 32
 UNIT_PPM = 40
 LONGEST_EDGE = 32767
@@ -75,23 +77,34 @@ class HertzAxis:
         _check_axis(self.first, self.step)
 
 
+@dataclass(frozen=True)
+class TimeAxis:
+    """A time axis in seconds: sample m at first + m·step."""
+
+    first: float
+    step: float
+    unit_code = UNIT_SECOND
+    unit = "s"
+
+    def __post_init__(self) -> None:
+        _check_axis(self.first, self.step)
+
+
 def affine(grid: Grid) -> NDArray[np.float64]:
-    """Voxel indices (i, j, k, 1) of the file to millimetres, (4, 4)."""
-    dz, dy, dx = grid.voxel
-    matrix = np.diag([dx * 1e3, dy * 1e3, dz * 1e3, 1.0])
-    matrix[2, 3] = grid.heights[0] * 1e3
-    return matrix
+    """Voxel indices (i, j, k, 1) of the file to millimetres in the instrument's frame, (4, 4)."""
+    return INSTRUMENT.affine(grid)
 
 
 def write_cube(
     path: Path | str,
     cube: NDArray[Any],
     grid: Grid,
-    axis: PpmAxis | HertzAxis,
+    axis: PpmAxis | HertzAxis | TimeAxis,
     part: Part,
     quantity: str = "signal",
     unit: str = "arbitrary",
     facts: Mapping[str, Any] | None = None,
+    placement: Placement = INSTRUMENT,
 ) -> list[Path]:
     """Write a real cube (f, z, y, x) as a float32 4-D file (x, y, z, f).
 
@@ -110,7 +123,7 @@ def write_cube(
         .nii or .nii.gz, or a folder that cannot be written.
     """
     data = _checked(cube, grid, 4, path)
-    image = _image(data, grid, f"{part.value}: {quantity}")
+    image = _image(data, placement.affine(grid), f"{part.value}: {quantity}")
     header = image.header
     header["pixdim"][4] = axis.step
     header["toffset"] = axis.first
@@ -127,6 +140,7 @@ def write_map(
     name: str,
     unit: str = "arbitrary",
     facts: Mapping[str, Any] | None = None,
+    placement: Placement = INSTRUMENT,
 ) -> list[Path]:
     """Write one real map (z, y, x) as a float32 3-D file (x, y, z) with `name` as its intent.
 
@@ -134,13 +148,19 @@ def write_map(
     15 bytes of the name; the JSON file holds all of it.
     """
     data = _checked(values, grid, 3, path)
-    image = _image(data, grid, f"{name} ({unit})")
+    image = _image(data, placement.affine(grid), f"{name} ({unit})")
     image.header["intent_code"] = INTENT_ESTIMATE
     image.header["intent_name"] = _shortened(name, LONGEST_INTENT_NAME)
     return _write(Path(path), data, image, grid, _sidecar(grid, name, unit) | dict(facts or {}))
 
 
-def write_mask(path: Path | str, mask: NDArray[Any], grid: Grid, name: str = "mask") -> list[Path]:
+def write_mask(
+    path: Path | str,
+    mask: NDArray[Any],
+    grid: Grid,
+    name: str = "mask",
+    placement: Placement = INSTRUMENT,
+) -> list[Path]:
     """Write labels or a mask (z, y, x), whole numbers 0 to 255, as an 8-bit 3-D label file."""
     path = Path(path)
     _stem(path)
@@ -151,7 +171,7 @@ def write_mask(path: Path | str, mask: NDArray[Any], grid: Grid, name: str = "ma
     if not np.array_equal(labels, values):
         raise InputError("labels must be whole numbers from 0 to 255", str(path))
     with atomic_path(path) as temporary:
-        nibabel.save(_label_image(labels, grid, name), temporary)
+        nibabel.save(_label_image(labels, placement.affine(grid), name), temporary)
     return [path]
 
 
@@ -179,26 +199,27 @@ def _checked(values: NDArray[Any], grid: Grid, dimensions: int, path: Path | str
     return values
 
 
-def _image(data: NDArray[Any], grid: Grid, description: str) -> Any:
+def _image(data: NDArray[Any], where: NDArray[np.float64], description: str) -> Any:
     """A NIfTI-1 image of finite float32 data with the common header facts."""
     with np.errstate(over="ignore"):
         single = data.astype(np.float32)
     filled = np.where(np.isfinite(single), single, np.float32(0))
-    return _placed(filled, grid, description)
+    return placed(filled, where, description)
 
 
-def _label_image(labels: NDArray[np.uint8], grid: Grid, name: str) -> Any:
-    image = _placed(labels, grid, name)
+def _label_image(labels: NDArray[np.uint8], where: NDArray[np.float64], name: str) -> Any:
+    image = placed(labels, where, name)
     image.header["intent_code"] = INTENT_LABEL
     image.header["intent_name"] = _shortened(name, LONGEST_INTENT_NAME)
     return image
 
 
-def _placed(data: NDArray[Any], grid: Grid, description: str) -> Any:
+def placed(data: NDArray[Any], where: NDArray[np.float64], description: str) -> Any:
+    """A NIfTI-1 image of data (…, z, y, x) with an affine in millimetres."""
     new_image: Any = nibabel.Nifti1Image
     image: Any = new_image(data.T, None)
-    image.set_sform(affine(grid), code=1)
-    image.set_qform(affine(grid), code=1)
+    image.set_sform(where, code=1)
+    image.set_qform(where, code=1)
     image.header["xyzt_units"] = UNIT_MILLIMETRE
     image.header["descrip"] = _shortened(description, LONGEST_DESCRIPTION)
     return image
@@ -245,7 +266,7 @@ def _write(
         nibabel.save(image, stack.enter_context(atomic_path(path)))
         if not present.all():
             sidecar = sidecar | {"Mask": mask_path.name}
-            labels = _placed(present.astype(np.uint8), grid, "1 = value present")
+            labels = placed(present.astype(np.uint8), image.get_sform(), "1 = value present")
             labels.header["intent_code"] = INTENT_LABEL
             for field in ("toffset", "xyzt_units"):
                 labels.header[field] = image.header[field]
