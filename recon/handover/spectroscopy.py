@@ -1,7 +1,8 @@
 """The complex time-domain cube as a NIfTI-MRS file.
 
 complex64 (x, y, z, t), pixdim[4] the dwell in seconds, intent `mrs_v0_9`, and first among the
-header extensions one of code 44 with JSON. A line at δ ppm is stored as exp(−i 2π (δ − δ_ref)·1e-6·f t),
+header extensions one of code 44 with JSON. A line at δ ppm is stored as
+exp(−i 2π (δ − δ_ref)·1e-6·f t),
 the sign in which our cubes are kept. Source: NIfTI-MRS standard, version 0.9 (Clarke et al.,
 Magn. Reson. Med. 88:2358, 2022).
 """
