@@ -17,12 +17,13 @@ from numpy.typing import NDArray
 
 from recon import figures
 from recon.basis import species_basis
-from recon.handover import nifti
+from recon.handover.dataset import Delivery
 from recon.instrument import Instrument
 from recon.planning.tables import VariableDensity, lateral_factor
 from recon.protocol import Protocol, SpectralAxis
 from recon.reconstruct import reconstruct
 from recon.record import Record
+from recon.report import Content, write_page
 from recon.result import Cube, SpeciesMaps
 from recon.simulate import simulate
 from recon.solvers.estimate import Progress, silent
@@ -125,8 +126,12 @@ class Demo:
         assert isinstance(cube, Cube)
         cube.save(self.folder / "cube.h5")
         yield done("reconstructed the complex cube", self.folder / "cube.h5")
-        yield done("wrote NIfTI", *self.hand_over(maps, cube))
         yield done("drew figures", *self.draw(specimen, table, maps, ridge, cube))
+        files = self.hand_over(maps, cube)
+        page = self.report(specimen, apparatus, table, maps, cube)
+        yield done(f"handed over {len(files)} files and a page", page)
+        yield f"open the page      {page}"
+        yield f"open the dataset   {self.folder / 'dataset'}"
 
     def describe(self) -> tuple[Specimen, Instrument, Protocol]:
         """Write and return the descriptions and the table of shots."""
@@ -165,29 +170,32 @@ class Demo:
             yield f"  {name:<10}" + "".join(f"{part:6.0f} %" for part in figures_of_merit)
 
     def hand_over(self, maps: SpeciesMaps, cube: Cube) -> list[Path]:
-        """Maps, errors and spectrum as NIfTI."""
-        folder, written = self.folder / "nifti", []
-        for place, name in enumerate(maps.names):
-            written += nifti.write_map(
-                folder / f"{name}.nii.gz", maps.values[place], maps.grid, name, "mM"
-            )
-            if maps.standard_error is not None:
-                error = maps.standard_error[place]
-                written += nifti.write_map(
-                    folder / f"{name}_error.nii.gz", error, maps.grid, f"{name} s.e.", "mM"
-                )
-        ppm, spectrum = cube.spectrum()
-        axis = nifti.PpmAxis(float(ppm[0]), float(ppm[1] - ppm[0]))
-        written += nifti.write_cube(
-            folder / "spectrum.nii.gz",
-            spectrum.real,
-            cube.grid,
-            axis,
-            nifti.Part.REAL,
-            "spectrum of transverse magnetisation",
-            "A/m s",
+        """The dataset for an imaging group."""
+        written = Delivery(maps, cube, name="invented muscle section").write(
+            self.folder / "dataset", replace=True
         )
-        return written
+        return [self.folder / "dataset" / path for path in written]
+
+    def report(
+        self,
+        specimen: Specimen,
+        apparatus: Instrument,
+        table: Protocol,
+        maps: SpeciesMaps,
+        cube: Cube,
+    ) -> Path:
+        """The page for a person."""
+        content = Content(
+            maps,
+            cube,
+            specimen.species,
+            apparatus,
+            table,
+            specimen.concentrations,
+            title="Exercised muscle on a sensor (invented)",
+            notes=specimen.notes,
+        )
+        return write_page(self.folder / "report.html", content)
 
     def draw(
         self,

@@ -13,6 +13,7 @@ from recon.cli import (
     make_protocol,
     make_specimen,
     reconstruct,
+    report,
     show,
     simulate,
 )
@@ -24,6 +25,7 @@ VERBS = (
     make_protocol.verb,
     simulate.verb,
     reconstruct.verb,
+    report.verb,
     hand_over.verb,
     show.verb,
 )

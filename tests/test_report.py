@@ -1,0 +1,149 @@
+"""The page in a real browser: its numbers are those of the arrays."""
+
+from __future__ import annotations
+
+import re
+import shutil
+from pathlib import Path
+
+import numpy as np
+import pytest
+
+from recon.demo import instrument
+from recon.errors import InputError
+from recon.planning.tables import VariableDensity
+from recon.report import Content, write_page
+from recon.specimen import Species
+from tests import results
+
+webdriver = pytest.importorskip("selenium.webdriver")
+FLAGS = [
+    "--headless",
+    "--no-sandbox",
+    "--disable-gpu",
+    "--disable-quic",
+    "--no-first-run",
+    "--disable-background-networking",
+    "--disable-component-update",
+    "--disable-sync",
+]
+
+
+def species(name: str, shift: float) -> Species:
+    return Species(
+        name=name,
+        shift_ppm=shift,
+        equivalent_nuclei=3,
+        t2_star_ms=20.0,
+        t1_s=1.0,
+        diffusion_um2_per_ms=0.2,
+        polarisation=0.01,
+    )
+
+
+@pytest.fixture(scope="module")
+def content() -> Content:
+    maps, cube = results.maps(), results.cube()
+    protocol = VariableDensity(shots=4).protocol(maps.grid, cube.sample_times)
+    lines = (species("lactate", results.SHIFT), species("lipid CH2", 1.28))
+    truth = maps.values + np.float32(1.5)
+    return Content(maps, cube, lines, instrument(), protocol, truth, title="A <test> & more")
+
+
+@pytest.fixture(scope="module")
+def page(content, tmp_path_factory) -> Path:
+    return write_page(tmp_path_factory.mktemp("page") / "page.html", content)
+
+
+@pytest.fixture
+def browser(page, tmp_path):
+    driver, chromium = shutil.which("chromedriver"), shutil.which("chromium")
+    if driver is None or chromium is None:
+        pytest.skip("no browser: install Debian's chromium and chromium-driver")
+    options = webdriver.ChromeOptions()
+    options.binary_location = chromium
+    for flag in (*FLAGS, f"--user-data-dir={tmp_path / 'profile'}", "--window-size=1400,1000"):
+        options.add_argument(flag)
+    service = webdriver.ChromeService(executable_path=driver)
+    open_browser = webdriver.Chrome(options=options, service=service)
+    open_browser.get(page.as_uri())
+    yield open_browser
+    open_browser.quit()
+
+
+def shown(browser, place: int) -> tuple[float, float]:
+    cell = browser.find_element("id", f"amount-{place}")
+    return float(cell.get_attribute("data-value")), float(cell.get_attribute("data-error"))
+
+
+def point_at(browser, y: int, x: int) -> None:
+    _, ny, nx = results.grid().shape
+    browser.execute_script(
+        "const c = document.getElementById('plane'), b = c.getBoundingClientRect();"
+        f"c.dispatchEvent(new PointerEvent('pointerdown', {{bubbles: true, buttons: 1,"
+        f"clientX: b.left + b.width * {(x + 0.5) / nx},"
+        f"clientY: b.top + b.height * {1 - (y + 0.5) / ny}}}));"
+    )
+
+
+def test_pointing_reads_the_arrays(browser, content):
+    """Every voxel pointed at shows its own amounts, errors and spectrum."""
+    maps = content.maps
+    _, spectrum = content.cube.spectrum()
+    browser.find_element("id", "plane-1").click()
+    for y, x in ((0, 0), (3, 4), (2, 1)):
+        point_at(browser, y, x)
+        for place in range(2):
+            value, error = shown(browser, place)
+            assert value == pytest.approx(float(maps.values[place, 1, y, x]), rel=1e-6)
+            assert error == pytest.approx(float(maps.standard_error[place, 1, y, x]), rel=1e-6)
+        peak = float(browser.find_element("id", "spectrum").get_attribute("data-peak"))
+        assert peak == pytest.approx(float(spectrum[:, 1, y, x].real.max()), rel=1e-5)
+    text = browser.find_element("id", "amount-0").text
+    assert re.fullmatch(r"[\d.\s\u202f]+ ± 3\.0", text)
+
+
+def test_keyboard_moves_through_everything(browser, content):
+    from selenium.webdriver.common.keys import Keys
+
+    point_at(browser, 1, 1)
+    plane = browser.find_element("id", "plane")
+    plane.send_keys(Keys.ARROW_RIGHT, Keys.ARROW_UP, Keys.PAGE_UP)
+    assert shown(browser, 0)[0] == pytest.approx(float(content.maps.values[0, 1, 2, 2]))
+    plane.send_keys("2", "v")
+    assert browser.find_element("id", "species-1").is_selected()
+    assert browser.find_element("id", "view-error").is_selected()
+    title = browser.find_element("id", "plane-title").text
+    assert title == "lipid CH2, standard error, 7 µm above the diamond"
+    assert "lipid CH2" in browser.find_element("id", "spoken").get_attribute("textContent")
+
+
+def test_page_says_what_must_be_said(browser):
+    text = browser.find_element("tag name", "body").text
+    assert "not for diagnosis" in text
+    assert "A <test> & more" in text
+    assert "piecewise constant (test)" in text
+    assert "intervals can be too narrow" in text
+    assert "mM" in text
+    assert not browser.get_log("browser")
+
+
+@pytest.mark.parametrize("width", [380, 900, 1400])
+def test_nothing_overflows(browser, width):
+    browser.execute_cdp_cmd(
+        "Emulation.setDeviceMetricsOverride",
+        {"width": width, "height": 900, "deviceScaleFactor": 1, "mobile": False},
+    )
+    wide = browser.execute_script("return document.documentElement.scrollWidth")
+    assert wide <= width
+
+
+def test_page_fetches_nothing(page):
+    text = page.read_text(encoding="utf-8")
+    assert not re.search(r"(src|href)\s*=\s*[\"'](?!data:)", text)
+    assert not re.search(r"https?://(?!www\.w3\.org/2000/svg)", text)
+
+
+def test_content_must_fit(content):
+    with pytest.raises(InputError, match="same order"):
+        Content(content.maps, content.cube, content.species[::-1], instrument(), content.protocol)
