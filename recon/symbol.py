@@ -19,7 +19,7 @@ class Symbol:
     Attributes
     ----------
     lateral
-        (ny, nx) in FFT order, or a scalar.
+        (ny, nx) in FFT order, or a scalar, or (nz, 1 or ny, 1 or nx) where planes differ.
     axial
         (nz, nz) symmetric, or (nz, nz, ny, nx) where it differs from frequency to frequency, or
         None.
@@ -42,10 +42,10 @@ class Symbol:
         """DᴴD x for an unknown (components, nz, ny, nx), real or complex; its kind is kept."""
         kind = x.real.dtype
         lateral = np.asarray(self.lateral, kind)
-        if lateral.ndim == 0:
+        if lateral.ndim == 0 or lateral.shape[-2:] == (1, 1):
             image = x * lateral
         elif np.isrealobj(x):
-            spectrum = scipy.fft.rfft2(x) * lateral[:, : x.shape[-1] // 2 + 1]
+            spectrum = scipy.fft.rfft2(x) * lateral[..., : x.shape[-1] // 2 + 1]
             image = scipy.fft.irfft2(spectrum, x.shape[-2:])
         else:
             image = scipy.fft.ifft2(scipy.fft.fft2(x) * lateral)

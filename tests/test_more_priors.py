@@ -69,6 +69,26 @@ def test_generalised_variation_at_every_depth(shape):
     np.testing.assert_allclose(term.adjoint(term.analyse(x)), term.symbol.apply(x), atol=1e-10)
 
 
+@pytest.mark.parametrize("prior", [*LINEAR, TotalVariation()], ids=str)
+def test_weights_of_planes(prior):
+    """Dᴴ P D against its symbol; a prox with one step per plane against one plane at a time."""
+    term = prior.on(FRAME)
+    planes = np.array([0.3, 1.0, 4.0])
+    symbol = term.weighted(planes)
+    if symbol is None:
+        assert isinstance(prior, LowRank | LocalLowRank | TotalGeneralisedVariation)
+        return
+    x = draw(SHAPE, float, 8)
+    tall = planes[:, None, None]
+    expected = term.adjoint(term.analyse(x) * tall)
+    np.testing.assert_allclose(symbol.apply(x), expected, atol=1e-10)
+    u = draw(term.analyse(x).shape, float, 9)
+    got = term.prox(u, 0.4 / tall)
+    for plane, weight in enumerate(planes):
+        single = term.prox(u, 0.4 / weight)
+        np.testing.assert_allclose(got[..., plane, :, :], single[..., plane, :, :])
+
+
 @pytest.mark.parametrize("wavelet", ["haar", "db2"])
 def test_cycle_spinning_is_the_mean_over_shifts(wavelet):
     """Brute force: the orthogonal prior of every circular shift, averaged."""

@@ -212,8 +212,8 @@ class BlockQuadratic:
         coupling = None if symbol.axial is None else self._coupling(symbol.axial)
         if isinstance(symbol.lateral, float | int):
             return symbol.lateral, coupling
-        plane = np.asarray(symbol.lateral)[..., : self._columns]
-        tall: Any = np.broadcast_to(plane, (self.shape[1], *plane.shape))
+        whole = np.broadcast_to(np.asarray(symbol.lateral), self.shape[1:])
+        tall: Any = whole[..., : self._columns]
         one: Any = self.layout.gather(tall[None])
         diagonal: FloatArray = np.tile(one.reshape(len(one), -1), (self.matrix.size // len(one), 1))
         return diagonal, coupling

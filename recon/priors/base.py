@@ -80,12 +80,23 @@ class Term(ABC):
         """R(u)."""
 
     @abstractmethod
-    def prox(self, u: Array, step: float) -> Array:
-        """argmin over v of ½‖v − u‖² + step · R(v)."""
+    def prox(self, u: Array, step: Any) -> Array:
+        """argmin over v of ½‖v − u‖² + step · R(v).
+
+        Where `weighted` gives a symbol, the step may differ between planes, (nz, 1, 1): then
+        ½ Σ_z |v_z − u_z|² / step_z + R(v).
+        """
+
+    def weighted(self, planes: NDArray[np.floating]) -> Symbol | None:
+        """Dᴴ P D for weights P of the planes (nz,); None if the prox knows one step for all."""
+        return None
 
 
 class Pointwise(Term):
-    """A term on the unknown itself: D is the identity."""
+    """A term on the unknown itself: D is the identity. Its prox may differ between planes."""
+
+    def weighted(self, planes: NDArray[np.floating]) -> Symbol | None:
+        return Symbol(planes[:, None, None])
 
     def analyse(self, x: Array) -> Array:
         return x

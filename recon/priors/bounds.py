@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 from dataclasses import dataclass
+from typing import Any
 
 import numpy as np
 from numpy.typing import NDArray
@@ -52,7 +53,7 @@ class BoxTerm(Pointwise):
         within = (self._lowest <= u).all() and (u <= self._highest).all()
         return 0.0 if within else np.inf
 
-    def prox(self, u: Array, step: float) -> Array:
+    def prox(self, u: Array, step: Any) -> Array:
         if np.iscomplexobj(u):
             raise InputError("bounds need a real unknown", "bounds", "leave them out of cube mode")
         return np.clip(u, np.asarray(self._lowest, u.dtype), np.asarray(self._highest, u.dtype))

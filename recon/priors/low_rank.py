@@ -13,6 +13,7 @@ from __future__ import annotations
 from dataclasses import dataclass
 
 import numpy as np
+from numpy.typing import NDArray
 
 from recon.errors import InputError
 from recon.priors.base import Array, Frame, Pointwise, Term
@@ -70,6 +71,9 @@ class LocalLowRank:
 
 class LowRankTerm(Pointwise):
     """One matrix."""
+
+    def weighted(self, planes: NDArray[np.floating]) -> None:
+        """The planes share their singular vectors, so they share the step."""
 
     def value(self, u: Array) -> float:
         return float(np.linalg.svd(u.reshape(len(u), -1).T, compute_uv=False).sum())

@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 from dataclasses import dataclass
+from typing import Any
 
 import numpy as np
 from numpy.typing import NDArray
@@ -55,5 +56,5 @@ class SupportTerm(Pointwise):
     def value(self, u: Array) -> float:
         return 0.0 if not np.any(u * ~self._inside) else np.inf
 
-    def prox(self, u: Array, step: float) -> Array:
+    def prox(self, u: Array, step: Any) -> Array:
         return u * self._inside

@@ -9,8 +9,10 @@ Source: Rudin, Osher & Fatemi, Physica D 60:259 (1992).
 from __future__ import annotations
 
 from dataclasses import dataclass
+from typing import Any
 
 import numpy as np
+from numpy.typing import NDArray
 
 from recon.priors.base import Array, Edges, Frame, Shape, Term, group_soft_threshold
 from recon.symbol import Symbol
@@ -72,6 +74,14 @@ class Gradient:
         x[:, 1:] += along_z[:, :-1]
         return x
 
+    def weighted(self, planes: NDArray[np.floating]) -> Symbol:
+        """∇ᴴ P ∇ for weights of the planes."""
+        lateral = planes[:, None, None] * np.asarray(self.symbol.lateral)
+        if len(planes) == 1:
+            return Symbol(lateral)
+        difference = self.scale[0] * np.diff(np.eye(len(planes)), axis=0)
+        return Symbol(lateral, difference.T @ (planes[:-1, None] * difference))
+
     def _lateral(self, shape: Shape) -> np.ndarray:
         parts = [
             (2 * scale * np.sin(np.pi * np.fft.fftfreq(n))) ** 2
@@ -98,11 +108,14 @@ class TotalVariationTerm(Term):
     def adjoint(self, u: Array) -> Array:
         return self._gradient.adjoint(u)
 
+    def weighted(self, planes: NDArray[np.floating]) -> Symbol:
+        return self._gradient.weighted(planes)
+
     def value(self, u: Array) -> float:
         axes = (0, 1) if self._joint else 1
         return float(np.sqrt((np.abs(u) ** 2).sum(axes)).sum())
 
-    def prox(self, u: Array, step: float) -> Array:
+    def prox(self, u: Array, step: Any) -> Array:
         if not self._joint:
             return group_soft_threshold(u, step, axis=1)
         together = u.reshape(-1, *u.shape[2:])

@@ -98,14 +98,17 @@ class UndecimatedWaveletTerm(Term):
         spectrum *= self._of(spectrum).conj()
         return scipy.fft.ifft2(spectrum.sum(axis=0), overwrite_x=True)
 
+    def weighted(self, planes: NDArray[np.floating]) -> Symbol:
+        return Symbol(planes[:, None, None] * np.asarray(self.symbol.lateral))
+
     def value(self, u: Array) -> float:
         axis = (1, 2, 3) if self._joint else (1, 2, 3, 4)
         size = np.sqrt((np.abs(u) ** 2).sum(axis=1)) if self._joint else np.abs(u)
         return float(size.sum(axis=axis) @ self.weights)
 
-    def prox(self, u: Array, step: float) -> Array:
+    def prox(self, u: Array, step: Any) -> Array:
         shape = (-1, *(1,) * 3) if self._joint else (-1, *(1,) * 4)
-        threshold = (step * self.weights).astype(u.real.dtype).reshape(shape)
+        threshold = (step * self.weights.reshape(shape)).astype(u.real.dtype)
         if self._joint:
             return group_soft_threshold(u, threshold, axis=1)
         return soft_threshold(u, threshold)

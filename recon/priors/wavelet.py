@@ -11,6 +11,7 @@ from typing import Any
 
 import numpy as np
 import pywt
+from numpy.typing import NDArray
 
 from recon.errors import InputError
 from recon.priors.base import (
@@ -21,6 +22,7 @@ from recon.priors.base import (
     group_soft_threshold,
     soft_threshold,
 )
+from recon.symbol import Symbol
 
 
 @dataclass(frozen=True)
@@ -103,12 +105,15 @@ class WaveletTerm(Term):
             )
         return x
 
+    def weighted(self, planes: NDArray[np.floating]) -> Symbol:
+        return Symbol(planes[:, None, None])
+
     def value(self, u: Array) -> float:
         ny, nx = self._coarse(u)
         size = np.sqrt((np.abs(u) ** 2).sum(axis=0)) if self._joint else np.abs(u)
         return float(size.sum() - size[..., :ny, :nx].sum())
 
-    def prox(self, u: Array, step: float) -> Array:
+    def prox(self, u: Array, step: Any) -> Array:
         ny, nx = self._coarse(u)
         shrink = group_soft_threshold if self._joint else soft_threshold
         shrunk = shrink(u, np.asarray(step, u.real.dtype))

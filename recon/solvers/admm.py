@@ -1,12 +1,16 @@
 """Alternating directions with the exact quadratic step.
 
-    x ← (G + ρ Σ DᵢᴴDᵢ)⁻¹ (b + ρ Σ Dᵢᴴ(uᵢ − dᵢ))
+    x ← (G + Σ Dᵢᴴ P Dᵢ)⁻¹ (b + Σ Dᵢᴴ P (uᵢ − dᵢ))
     vᵢ ← α Dᵢ x + (1 − α) uᵢ
-    uᵢ ← prox of (λᵢ/ρ) Rᵢ at vᵢ + dᵢ
+    uᵢ ← prox of λᵢ P⁻¹ Rᵢ at vᵢ + dᵢ
     dᵢ ← dᵢ + vᵢ − uᵢ
 
+P = ρ p(z): one penalty per plane, as planes differ in sensitivity by orders of magnitude; p is a
+power of the mean diagonal of G per plane, of geometric mean 1. Terms that couple the planes in
+their prox get ρ alone.
+
 Source: Boyd, Parikh, Chu, Peleato & Eckstein, Foundations and Trends in Machine Learning 3:1
-(2011), over-relaxation and residual balancing of section 3.4.
+(2011), over-relaxation and residual balancing of section 3.4; varying penalties, section 3.4.2.
 """
 
 from __future__ import annotations
@@ -22,6 +26,7 @@ from numpy.typing import NDArray
 from recon.errors import InputError
 from recon.solvers.loop import Residuals, relative
 from recon.solvers.problem import Problem, Step
+from recon.symbol import Symbol
 
 Array = NDArray[np.inexact]
 
@@ -38,6 +43,7 @@ class ADMMState:
     primal: float = np.inf
     dual: float = np.inf
     _step: Step | None = field(default=None, repr=False)
+    _rho: list[Any] = field(default_factory=list, repr=False)
 
     def copy(self) -> ADMMState:
         """A state that further iterations leave alone."""
@@ -50,6 +56,7 @@ class ADMMState:
             self.primal,
             self.dual,
             self._step,
+            self._rho,
         )
 
 
@@ -60,7 +67,10 @@ class ADMM:
     Attributes
     ----------
     penalty
-        ρ at the start, in units of the mean diagonal of G; None chooses it from the data.
+        ρ at the start, in units of the mean diagonal of G.
+    plane_power
+        Power of a plane's sensitivity (the root of its diagonal of G) in its penalty; 0 treats
+        all planes alike.
     over_relaxation
         α, from 1 to below 2.
     balance_every
@@ -71,7 +81,8 @@ class ADMM:
         Ratio of the residuals beyond which ρ is adjusted.
     """
 
-    penalty: float | None = None
+    penalty: float = 0.5
+    plane_power: float = 1.0
     over_relaxation: float = 1.7
     balance_every: int = 5
     balance_until: int = 60
@@ -80,53 +91,51 @@ class ADMM:
     def __post_init__(self) -> None:
         if not 1 <= self.over_relaxation < 2:
             raise InputError("over_relaxation must be from 1 to below 2", "ADMM settings")
-        if self.penalty is not None and not self.penalty > 0:
+        if not self.penalty > 0:
             raise InputError("penalty must be positive", "ADMM settings")
 
     def start(self, problem: Problem, guess: Array | None) -> ADMMState:
         """Zero duals; u from the guess, or from one damped least-squares step."""
         quadratic = problem.quadratic
-        penalty = 1.0 if self.penalty is None else self.penalty
-        step = _exact_step(problem, penalty)
-        guess = step(quadratic.linear) if guess is None else guess
-        u = [part.term.analyse(guess.astype(quadratic.dtype, copy=False)) for part in problem.terms]
-        state = ADMMState(u, [np.zeros_like(one) for one in u], penalty)
-        state._step = step
+        state = ADMMState([], [], self.penalty)
+        step = self._factorise(problem, state)
+        guess = step(quadratic.linear) if guess is None else guess.astype(quadratic.dtype)
+        state.u = [part.term.analyse(guess) for part in problem.terms]
+        state.d = [np.zeros_like(one) for one in state.u]
         return state
 
     def advance(self, problem: Problem, state: ADMMState) -> ADMMState:
         """One iteration, in place."""
-        self._balance(problem, state)
-        quadratic, rho, alpha = problem.quadratic, state.penalty, self.over_relaxation
-        kind = quadratic.dtype.type(0).real.dtype.type
+        self._prepare(problem, state)
+        alpha = state.u[0].real.dtype.type(self.over_relaxation)
         targets = [u - d for u, d in zip(state.u, state.d, strict=True)]
+        parts = list(zip(problem.terms, state._rho, strict=True))
         pulled = [
-            part.term.adjoint(target) for part, target in zip(problem.terms, targets, strict=True)
+            part.term.adjoint(target * rho)
+            for (part, rho), target in zip(parts, targets, strict=True)
         ]
-        right: Any = reduce(add, pulled)
-        right = right * kind(rho)
-        right += quadratic.linear
         assert state._step is not None
-        x = state.x = state._step(right, state.x)
-        primal = dual = primal_scale = dual_scale = 0.0
-        for place, part in enumerate(problem.terms):
+        x = state.x = state._step(reduce(add, pulled, problem.quadratic.linear), state.x)
+        sums = np.zeros(4)
+        for place, (part, rho) in enumerate(parts):
             image = part.term.image_near(x, targets[place])
-            before, d = state.u[place], state.d[place]
-            relaxed = kind(alpha) * image + kind(1 - alpha) * before
-            relaxed += d
+            before = state.u[place]
+            relaxed = alpha * image
+            relaxed += (1 - alpha) * before
+            relaxed += state.d[place]
             u = part.term.prox(relaxed, part.weight / rho)
             state.u[place], state.d[place] = u, np.subtract(relaxed, u, out=relaxed)
-            primal += _squared(image - u)
-            primal_scale += max(_squared(image), _squared(u))
-            dual += _squared(u - before)
-            dual_scale += _squared(state.d[place])
+            size = max(_squared(image, rho), _squared(u, rho))
+            changes = (image - u, u - before, state.d[place])
+            sums += [size, *(_squared(one, rho) for one in changes)]
+        scale, primal, dual, dual_scale = np.sqrt(sums)
         state.iteration += 1
-        state.primal = relative(np.sqrt(primal), np.sqrt(primal_scale))
-        state.dual = relative(np.sqrt(dual), np.sqrt(max(dual_scale, dual)))
+        state.primal = relative(primal, scale)
+        state.dual = relative(dual, max(dual, dual_scale))
         return state
 
     def residuals(self, problem: Problem, state: ADMMState) -> Residuals:
-        """‖Dx − u‖ over ‖u‖, and ‖u − u_before‖ over ‖d‖: ρ cancels in the second."""
+        """‖Dx − u‖ over ‖u‖, and ‖u − u_before‖ over ‖d‖, in the norm weighted by P."""
         return Residuals(state.primal, state.dual)
 
     def estimate(self, problem: Problem, state: ADMMState) -> Array:
@@ -137,7 +146,7 @@ class ADMM:
         assert state.x is not None
         return state.x
 
-    def _balance(self, problem: Problem, state: ADMMState) -> None:
+    def _prepare(self, problem: Problem, state: ADMMState) -> None:
         """Adjust ρ where the residuals are out of balance, and (re)build the exact step."""
         due = self.balance_every and state.iteration % self.balance_every == 0
         if due and 0 < state.iteration <= self.balance_until and np.isfinite(state.primal):
@@ -148,13 +157,29 @@ class ADMM:
                 state.d = [d / d.real.dtype.type(factor) for d in state.d]
                 state._step = None
         if state._step is None:
-            state._step = _exact_step(problem, state.penalty)
+            self._factorise(problem, state)
+
+    def _factorise(self, problem: Problem, state: ADMMState) -> Step:
+        """(G + Σ Dᵢᴴ P Dᵢ)⁻¹, and P for every term: a number, or (nz, 1, 1)."""
+        quadratic = problem.quadratic
+        kind = np.empty(0, quadratic.dtype).real.dtype
+        sensitivity = np.sqrt(np.maximum(quadratic.diagonal().mean(axis=0), 1e-30))
+        profile = (sensitivity / np.exp(np.log(sensitivity).mean())) ** self.plane_power
+        planes = state.penalty * profile
+        symbols: list[Symbol] = []
+        state._rho = []
+        for part in problem.terms:
+            weighted = part.term.weighted(planes)
+            symbols.append(part.term.symbol.scaled(state.penalty) if weighted is None else weighted)
+            rho: Any = kind.type(state.penalty)
+            state._rho.append(rho if weighted is None else planes.astype(kind)[:, None, None])
+        state._step = quadratic.step(reduce(add, symbols))
+        return state._step
 
 
-def _exact_step(problem: Problem, penalty: float) -> Step:
-    symbols = (part.term.symbol for part in problem.terms)
-    return problem.quadratic.step(reduce(add, symbols).scaled(penalty))
-
-
-def _squared(values: Array) -> float:
-    return float(np.vdot(values, values).real)
+def _squared(values: Array, rho: Any) -> float:
+    """‖values‖² in the norm weighted by ρ, a number or one per plane."""
+    if np.ndim(rho) == 0:
+        return float(rho * np.vdot(values, values).real)
+    flat = values.reshape(-1, len(rho), values.shape[-1] * values.shape[-2])
+    return float((np.vecdot(flat, flat).real @ rho.ravel()).sum())

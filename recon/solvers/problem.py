@@ -37,6 +37,9 @@ class Quadratic(Protocol):
     def largest(self) -> float:
         """Largest eigenvalue of G, or an upper bound."""
 
+    def diagonal(self) -> NDArray[np.floating]:
+        """Mean diagonal of G, (components, nz)."""
+
     def value(self, x: Array) -> float:
         """The data term at x, with its constant."""
 
