@@ -222,6 +222,15 @@ class Demo:
                 depths=(0, 2, 5),
             )
             written.append(figures.save(picture, folder / f"{name}.png"))
+            if maps.standard_error is not None:
+                stack = figures.depth_stack(
+                    maps.values[place],
+                    maps.standard_error[place],
+                    maps.grid,
+                    quantity=name,
+                    unit="mM",
+                )
+                written.append(figures.save(stack, folder / f"{name}-planes.png"))
         written.append(figures.save(self._spectrum(specimen, cube), folder / "spectrum.png"))
         shots = figures.coverage(
             table.nuclear_wavevector,

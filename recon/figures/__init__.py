@@ -3,20 +3,25 @@
 Functions take arrays and a grid and give a matplotlib figure; `save` writes it.
 """
 
+from recon.figures.depth_stack import depth_stack
 from recon.figures.history import Progress, history
 from recon.figures.maps import comparison, overview
 from recon.figures.protocol_coverage import coverage
 from recon.figures.sensitivity import sensitivity
 from recon.figures.spectrum import spectrum
 from recon.figures.style import save
+from recon.figures.verdicts import Verdict, verdicts
 
 __all__ = [
     "Progress",
+    "Verdict",
     "comparison",
     "coverage",
+    "depth_stack",
     "history",
     "overview",
     "save",
     "sensitivity",
     "spectrum",
+    "verdicts",
 ]

@@ -49,9 +49,9 @@ def comparison(
         No map, a complex map, a map that does not fit the grid, or a slice that is not there.
     """
     shown = ({} if truth is None else {"truth": truth}) | dict(columns)
-    chosen = _checked(shown, grid, depths)
+    chosen = checked(shown, grid, depths)
     errors = {} if truth is None else {name: one - truth for name, one in columns.items()}
-    limits = limits or _amount_limits([truth] if truth is not None else list(columns.values()))
+    limits = limits or amount_limits([truth] if truth is not None else list(columns.values()))
     limit = error_limit or _error_limit(list(errors.values()), limits)
     with style.applied():
         figure, axes = _panels(len(chosen), (len(shown), len(errors)), grid)
@@ -79,11 +79,11 @@ def overview(
 
     maps: by name, each (nz, ny, nx), real, all in the same unit. Errors: as `comparison`.
     """
-    chosen = _checked(maps, grid, depths)
+    chosen = checked(maps, grid, depths)
     with style.applied():
         figure, axes = _panels(len(chosen), (len(maps), 0), grid)
         for column, (name, one) in enumerate(maps.items()):
-            limits = _amount_limits([one])
+            limits = amount_limits([one])
             panels = axes[:, column : column + 1]
             images = _fill(panels, {name: one}, grid, chosen, style.AMOUNTS, limits)
             _colour_bar(figure, images, panels[-1], unit)
@@ -91,9 +91,10 @@ def overview(
     return figure
 
 
-def _checked(
+def checked(
     maps: Mapping[str, FloatArray], grid: Grid, depths: Sequence[int] | None
 ) -> Sequence[int]:
+    """The planes to draw; maps that do not fit are refused."""
     if not maps:
         raise InputError("there is no map to draw", "figure")
     for name, one in maps.items():
@@ -112,7 +113,7 @@ def _checked(
     return depths
 
 
-def _amount_limits(maps: Sequence[FloatArray]) -> Limits:
+def amount_limits(maps: Sequence[FloatArray]) -> Limits:
     """From zero (or the least value) to just below the largest."""
     values = np.concatenate([np.ravel(one) for one in maps])
     values = values[np.isfinite(values)]

@@ -107,7 +107,7 @@ function drawStack() {
   const svg = by("stack"), width = 190, height = 400;
   svg.replaceChildren();
   svg.setAttribute("viewBox", `0 0 ${width} ${height}`);
-  svg.setAttribute("preserveAspectRatio", "xMidYMax meet");
+  svg.setAttribute("preserveAspectRatio", "xMidYMin meet");
   const believe = facts.believe[state.species], worst = Math.max(...believe.error_mM);
   const base = height - 66, room = base - 20, dz = facts.voxel_um[0];
   const top = facts.heights_um[nz - 1] + dz / 2;

@@ -1,0 +1,77 @@
+"""All planes of one quantity, lowest at the bottom as they lie, with the error beside each."""
+
+from __future__ import annotations
+
+from typing import Any
+
+import numpy as np
+from matplotlib.figure import Figure
+from numpy.typing import NDArray
+
+from recon.figures import style
+from recon.figures.maps import amount_limits, checked
+from recon.grid import Grid
+
+FloatArray = NDArray[np.floating]
+COLUMNS = 2
+
+
+def depth_stack(
+    values: FloatArray,
+    standard_error: FloatArray,
+    grid: Grid,
+    *,
+    quantity: str,
+    unit: str,
+) -> Figure:
+    """Amounts at the left, standard errors at the right, every plane, one scale per column.
+
+    Parameters
+    ----------
+    values, standard_error
+        (nz, ny, nx), real, in `unit`.
+
+    Raises
+    ------
+    InputError
+        Maps that are complex or do not fit the grid.
+    """
+    checked({quantity: values, "standard error": standard_error}, grid, None)
+    nz = grid.shape[0]
+    left, right, bottom, top = style.extent_um(grid)
+    aspect = (top - bottom) / (right - left)
+    panel = 1.35
+    with style.applied():
+        figure = style.new_figure(COLUMNS * panel + 0.5, nz * panel * aspect + 1.15)
+        axes: NDArray[Any] = figure.subplots(nz, COLUMNS, squeeze=False)
+        for column, (name, maps) in enumerate(
+            {quantity: values, "standard error": standard_error}.items()
+        ):
+            low, high = amount_limits([maps])
+            images = []
+            for row, panel_axes in enumerate(axes[::-1, column]):
+                images.append(
+                    panel_axes.imshow(
+                        np.ma.masked_invalid(maps[row]),
+                        origin="lower",
+                        extent=style.extent_um(grid),
+                        cmap=style.AMOUNTS,
+                        vmin=low,
+                        vmax=high,
+                        interpolation="nearest",
+                    )
+                )
+                panel_axes.set_xticks([])
+                panel_axes.set_yticks([])
+                panel_axes.spines[:].set_visible(False)
+            axes[0, column].set_title(name)
+            bar = figure.colorbar(
+                images[0], ax=list(axes[:, column]), location="bottom", label=unit, aspect=14
+            )
+            bar.outline.set_visible(False)
+            bar.ax.locator_params(nbins=3)
+        for row, panel_axes in enumerate(axes[::-1, 0]):
+            panel_axes.set_ylabel(style.micrometres(grid.heights[row]))
+        style.scale_bar(axes[-1, 0])
+        figure.supylabel("height above the diamond", fontsize=10)
+    return figure
