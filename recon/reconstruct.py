@@ -2,11 +2,14 @@
 
 from __future__ import annotations
 
+import hashlib
 import importlib.metadata
+from collections.abc import Iterator
 from datetime import UTC, datetime
 from typing import Any
 
 import numpy as np
+from numpy.typing import NDArray
 
 from recon.errors import InputError
 from recon.forward import BlockQuadratic, ForwardModel, Statistics, accumulate
@@ -62,7 +65,8 @@ def reconstruct(
             "reconstruction",
             "raise the limit, or use fewer voxels or species",
         )
-    statistics, expand = unknown.compressed(read_statistics(record, unknown, progress))
+    reading = Reading(record)
+    statistics, expand = unknown.compressed(read_statistics(reading, unknown, progress))
     sensitivity = statistics.sensitivity()
     if not (sensitivity > 1e-6 * sensitivity.max()).all() or sensitivity.max() == 0:
         raise InputError(
@@ -79,20 +83,42 @@ def reconstruct(
         weights=estimate.weights,
         why_stopped=estimate.reason.value,
         misfit=estimate.misfit,
-        provenance=provenance(record, estimator),
+        provenance=provenance(reading, estimator),
         remarks=estimate.remarks,
     )
     return unknown.result(record, estimate, expand, account)
 
 
-def read_statistics(record: Record, unknown: Unknown, progress: Progress = silent) -> Statistics:
+class Reading:
+    """A record that is read once, and the digest of its samples after that."""
+
+    def __init__(self, record: Record) -> None:
+        self.record = record
+        self._digest = hashlib.sha256()
+
+    def shots(self) -> Iterator[tuple[slice, NDArray[np.complex64]]]:
+        """The record's shots in order."""
+        for where, samples in self.record.shots():
+            self._digest.update(memoryview(np.ascontiguousarray(samples)).cast("B"))
+            yield where, samples
+
+    @property
+    def digest(self) -> str:
+        """SHA-256 of the samples that were read, hexadecimal."""
+        return self._digest.hexdigest()
+
+
+def read_statistics(
+    reading: Reading | Record, unknown: Unknown, progress: Progress = silent
+) -> Statistics:
     """One pass over the record: b, G, energy."""
+    record = reading.record if isinstance(reading, Reading) else reading
     basis = unknown.basis(record)
     model = ForwardModel.build(
         record.specimen.grid, record.instrument, record.protocol, basis, record.noise_sd
     )
     total = len(record)
-    return accumulate(model, record.shots(), lambda done: progress("reading shots", done / total))
+    return accumulate(model, reading.shots(), lambda done: progress("reading shots", done / total))
 
 
 def estimate_memory(record: Record, unknown: Unknown) -> int:
@@ -110,11 +136,13 @@ def estimate_memory(record: Record, unknown: Unknown) -> int:
     return int(24 * cube + 5 * blocks)
 
 
-def provenance(record: Record, estimator: Any) -> dict[str, Any]:
+def provenance(reading: Reading, estimator: Any) -> dict[str, Any]:
     """Versions, digests, settings and date, as plain JSON values."""
+    record = reading.record
     names = ("nearspin", "numpy", "scipy", "pywavelets")
     return {
         "versions": {name: importlib.metadata.version(name) for name in names},
+        "record_sha256": reading.digest,
         "protocol_sha256": record.protocol.digest(),
         "shots": len(record),
         "noise_sd_T": record.noise_sd,

@@ -172,8 +172,9 @@ def believable(maps: SpeciesMaps, truth: FloatArray | None) -> list[dict[str, An
 def _traces(provenance: Any) -> list[tuple[str, Any]]:
     versions = provenance.get("versions", {})
     told = [("Versions", ", ".join(f"{name} {text}" for name, text in versions.items()))]
-    digest = provenance.get("protocol_sha256")
-    told += [("Protocol digest", str(digest)[:16])] if digest else []
+    for what in ("record", "protocol"):
+        digest = provenance.get(f"{what}_sha256")
+        told += [(f"{what.capitalize()} digest", str(digest)[:16])] if digest else []
     told += [("Date", provenance["date"])] if "date" in provenance else []
     return told
 
