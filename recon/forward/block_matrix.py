@@ -56,7 +56,9 @@ class BlockMatrix:
         return product
 
     def inverse(self) -> BlockMatrix:
-        """The inverse of every matrix."""
+        """The inverse of every matrix; they are Hermitian and positive definite."""
+        if self._columnwise:
+            return BlockMatrix(_gauss_jordan(self._entries), self.batch)
         return BlockMatrix(np.linalg.inv(self.per_block).transpose(0, 2, 3, 1), self.batch)
 
     def factor(self) -> BlockMatrix:
@@ -79,3 +81,23 @@ class BlockMatrix:
         """Eigenvalues (groups, blocks, q) ascending and eigenvectors (groups, blocks, q, q)."""
         values, vectors = np.linalg.eigh(self.per_block)
         return values, vectors
+
+
+def _gauss_jordan(entries: ComplexArray) -> ComplexArray:
+    """Inverses of small positive definite matrices (groups, q, q, blocks), all blocks at once.
+
+    Without pivoting, which such matrices do not need; several times faster than one call of a
+    solver per block.
+    """
+    inverse = entries.copy()
+    work = np.empty_like(inverse)
+    for pivot in range(entries.shape[1]):
+        scale = 1 / inverse[:, pivot, pivot].real
+        row = inverse[:, pivot] * scale[:, None]
+        column = inverse[:, :, pivot].copy()
+        np.multiply(column[:, :, None], row[:, None], out=work)
+        inverse -= work
+        inverse[:, pivot] = row
+        inverse[:, :, pivot] = column * -scale[:, None]
+        inverse[:, pivot, pivot] = scale
+    return inverse

@@ -81,7 +81,7 @@ class ADMM:
         Ratio of the residuals beyond which ρ is adjusted.
     """
 
-    penalty: float = 0.5
+    penalty: float = 1.0
     plane_power: float = 1.0
     over_relaxation: float = 1.7
     balance_every: int = 5
