@@ -99,7 +99,7 @@ class Reading:
     def shots(self) -> Iterator[tuple[slice, NDArray[np.complex64]]]:
         """The record's shots in order."""
         for where, samples in self.record.shots():
-            self._digest.update(memoryview(np.ascontiguousarray(samples)).cast("B"))
+            self._digest.update(np.ascontiguousarray(samples).data)
             yield where, samples
 
     @property
