@@ -168,13 +168,21 @@ class BlockQuadratic:
 
         Takes matrices (groups, blocks, q, q), such as a covariance.
         """
+        return self.plane_mean_of_diagonal(np.einsum("gkqq->gkq", per_block).real)
+
+    def plane_mean_of_diagonal(self, per_block: FloatArray) -> FloatArray:
+        """The same from diagonals (groups, blocks, q)."""
         weights = self.half_weights()
-        diagonal = np.einsum("gkqq,k->gq", per_block.real, weights / weights.sum())
+        diagonal = np.einsum("gkq,k->gq", per_block, weights / weights.sum())
         aliases = int(np.prod(self.layout.aliases))
         mean = diagonal.reshape(len(diagonal), -1, aliases, self.shape[1]).mean(axis=2)
         if self._mix is not None:
             return np.abs(self._mix) ** 2 @ mean[:, 0]
         return np.broadcast_to(mean[0], self.shape[:2])
+
+    def spread_plane(self, plane: FloatArray) -> FloatArray:
+        """A function of lateral frequency (ny, nx), FFT order, as block diagonals (q, blocks)."""
+        return np.asarray(self._spread(Symbol(plane))[0])
 
     def _assemble(self) -> tuple[ComplexArray | None, BlockMatrix]:
         """Choose how components are uncoupled; return the mixing matrix and the blocks."""
