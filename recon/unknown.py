@@ -64,6 +64,7 @@ class SpeciesAmounts:
             grid=record.specimen.grid,
             values=estimate.x.astype(np.float32, copy=False),
             standard_error=estimate.standard_error,
+            resolution=estimate.resolution,
             account=account,
             names=tuple(one.name for one in self._species(record)),
         )
@@ -111,15 +112,19 @@ class ComplexCube:
     def result(
         self, record: Record, estimate: Estimate, expand: ComplexArray | None, account: Account
     ) -> Cube:
-        x, error = estimate.x, estimate.standard_error
+        x, error, width = estimate.x, estimate.standard_error, estimate.resolution
         if expand is not None:
             x = np.tensordot(expand.astype(np.complex64), x, 1)
+            if width is not None:
+                power = np.abs(expand.astype(np.complex64)) ** 2
+                width = np.tensordot(power / power.sum(axis=1, keepdims=True), width, 1)
             if error is not None:
                 error = np.sqrt(np.tensordot(np.abs(expand.astype(np.complex64)) ** 2, error**2, 1))
         return Cube(
             grid=record.specimen.grid,
             values=x.astype(np.complex64, copy=False),
             standard_error=error,
+            resolution=width,
             account=account,
             sample_times=record.protocol.sample_times,
             larmor_frequency=record.instrument.larmor_frequency,

@@ -26,6 +26,7 @@ class Estimate:
     misfit: float
     weights: Mapping[str, float] = field(default_factory=dict)
     standard_error: FloatArray | None = None
+    resolution: FloatArray | None = None
     history: History = field(default_factory=History)
     remarks: tuple[str, ...] = ()
 

@@ -3,18 +3,19 @@
 from __future__ import annotations
 
 from collections.abc import Callable
-from dataclasses import dataclass, field
+from dataclasses import dataclass, field, replace
 
 import numpy as np
 from numpy.typing import NDArray
 
 from recon.forward.blocks import BlockQuadratic
-from recon.priors.base import Frame, Prior, Term
+from recon.priors.base import Edges, Frame, Prior, Term
 from recon.solvers.admm import ADMM, ADMMState
 from recon.solvers.estimate import Estimate, Progress, silent
 from recon.solvers.loop import Reason, Residuals, Solution, Stopping, solve
 from recon.solvers.problem import Problem, Weighted
 from recon.solvers.replicas import Replicas, Scatter
+from recon.solvers.resolution import PointResponse, Responses, resting_on_prior
 from recon.solvers.weight import SteinRisk, WeightRule
 
 Array = NDArray[np.inexact]
@@ -38,6 +39,8 @@ class Penalised:
         Tolerance of the solves that the search for the weight makes.
     replicas
         How errors are drawn; None leaves them out.
+    resolution
+        How point responses are measured; None leaves them out.
     """
 
     priors: tuple[Prior, ...]
@@ -47,6 +50,7 @@ class Penalised:
     stopping: Stopping = field(default_factory=lambda: Stopping(tolerance=5e-3, limit=300))
     search_tolerance: float = 1.5e-2
     replicas: Replicas | None = field(default_factory=Replicas)
+    resolution: PointResponse | None = field(default_factory=PointResponse)
 
     def __str__(self) -> str:
         return ", ".join(str(prior) for prior in self.priors)
@@ -58,9 +62,11 @@ class Penalised:
         run = _Run(self, quadratic, tuple(prior.on(frame) for prior in self.priors), progress)
         weight = self.weight.choose(quadratic, run.searcher(), run.searcher())
         solution = run.solve(weight, quadratic, self.stopping, None)
-        scatter = None
+        scatter = responses = None
         if self.replicas is not None:
             scatter = run.scatter(weight, solution, self.replicas)
+        if self.resolution is not None:
+            responses = run.responses(weight, solution, self.resolution, frame.voxel)
         return Estimate(
             x=solution.x,
             weights={
@@ -72,7 +78,11 @@ class Penalised:
             misfit=solution.misfit,
             history=solution.history,
             standard_error=None if scatter is None else scatter.standard_error,
-            remarks=() if scatter is None else (_remark(scatter),),
+            resolution=None if responses is None else responses.width,
+            remarks=(
+                *(() if scatter is None else (_remark(scatter),)),
+                *(() if responses is None else resting_on_prior(responses.recovered)),
+            ),
         )
 
 
@@ -91,7 +101,12 @@ class _Run:
         self.progress = progress
 
     def solve(
-        self, weight: float, data: BlockQuadratic, stopping: Stopping, state: ADMMState | None
+        self,
+        weight: float,
+        data: BlockQuadratic,
+        stopping: Stopping,
+        state: ADMMState | None,
+        method: ADMM | None = None,
     ) -> Solution[ADMMState]:
         parts = zip(self.terms, self.shares, strict=True)
         problem = Problem(data, tuple(Weighted(term, weight * share) for term, share in parts))
@@ -99,7 +114,9 @@ class _Run:
         def watch(iteration: int, residuals: Residuals) -> None:
             self.progress(f"λ {weight:.3g}, iteration {iteration}", None)
 
-        solution = solve(problem, self.settings.method, stopping, state=state, watch=watch)
+        solution = solve(
+            problem, method or self.settings.method, stopping, state=state, watch=watch
+        )
         if solution.reason is Reason.INTERRUPTED:
             raise KeyboardInterrupt
         return solution
@@ -118,14 +135,34 @@ class _Run:
         return run
 
     def scatter(self, weight: float, solution: Solution[ADMMState], replicas: Replicas) -> Scatter:
-        few = Stopping(0.0, limit=replicas.iterations)
-
-        def run(data: BlockQuadratic) -> Array:
-            return self.solve(weight, data, few, solution.state.copy()).x
-
+        run = self._again(weight, solution, replicas.iterations)
         return replicas.scatter(
             self.quadratic, solution.x, run, lambda done, of: self.progress("replicas", done / of)
         )
+
+    def responses(
+        self, weight: float, solution: Solution[ADMMState], points: PointResponse, voxel: Edges
+    ) -> Responses:
+        run = self._again(weight, solution, points.iterations)
+        return points.measure(
+            self.quadratic, voxel, run, lambda done, of: self.progress("resolution", done / of)
+        )
+
+    def _again(
+        self, weight: float, solution: Solution[ADMMState], iterations: int
+    ) -> Callable[[Array], Array]:
+        """Estimates from other right-hand sides, each afresh from the solution's state.
+
+        The penalty stays, so that the step is not factorised again.
+        """
+        few = Stopping(0.0, limit=iterations)
+        method = replace(self.settings.method, balance_every=0)
+
+        def run(b: Array) -> Array:
+            data = self.quadratic.with_linear(b)
+            return self.solve(weight, data, few, solution.state.copy(), method).x
+
+        return run
 
 
 def _remark(scatter: Scatter) -> str:

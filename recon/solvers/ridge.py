@@ -20,6 +20,7 @@ from recon.forward.blocks import BlockQuadratic
 from recon.priors.base import Frame
 from recon.solvers.estimate import Estimate, Progress, silent
 from recon.solvers.loop import Reason
+from recon.solvers.resolution import PointResponse, resting_on_prior
 from recon.symbol import Symbol
 
 Array = NDArray[np.inexact]
@@ -46,16 +47,20 @@ class Ridge:
     ) -> Estimate:
         """Solve, with the exact standard error of every value."""
         weight = chosen_weight(quadratic) if self.weight is None else self.weight
-        x = quadratic.step(Symbol(weight))(quadratic.linear)
+        step = quadratic.step(Symbol(weight))
+        x = step(quadratic.linear)
+        responses = PointResponse().measure(quadratic, frame.voxel, step)
         return Estimate(
             x=x,
             standard_error=standard_error(quadratic, weight),
             weights={"ridge": weight},
             reason=Reason.DIRECT,
             misfit=quadratic.misfit(x),
+            resolution=responses.width,
             remarks=(
                 "standard errors are those of the noise; detail that the weight suppresses is not "
                 "in them",
+                *resting_on_prior(responses.recovered),
             ),
         )
 
