@@ -12,10 +12,12 @@ from recon.cli import (
     hand_over,
     make_protocol,
     make_specimen,
+    plan,
     reconstruct,
     report,
     show,
     simulate,
+    what_if,
 )
 from recon.errors import InputError, InputWarning
 
@@ -23,6 +25,8 @@ VERBS = (
     demo.verb,
     make_specimen.verb,
     make_protocol.verb,
+    plan.verb,
+    what_if.verb,
     simulate.verb,
     reconstruct.verb,
     report.verb,

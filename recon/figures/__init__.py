@@ -10,6 +10,7 @@ from recon.figures.protocol_coverage import coverage
 from recon.figures.sensitivity import sensitivity
 from recon.figures.spectrum import spectrum
 from recon.figures.style import save
+from recon.figures.sweep import sweep
 from recon.figures.verdicts import Verdict, verdicts
 
 __all__ = [
@@ -23,5 +24,6 @@ __all__ = [
     "save",
     "sensitivity",
     "spectrum",
+    "sweep",
     "verdicts",
 ]
