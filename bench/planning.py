@@ -3,9 +3,9 @@
     python bench/planning.py --json
 
 Muscle section 64 × 64 × 6, three hyperpolarised metabolites, camera. Shots that the chosen plan
-needs for the mean error of 128 random ones; the bound against Monte-Carlo; reconstruction error at equal
-time; seconds to choose 256 shots from over 100 000 candidates; the greedy table against the best
-of all on a small problem, and against the relaxed lower bound on the large one.
+needs for the mean error of 128 random ones; the bound against Monte-Carlo; reconstruction error at
+equal time; seconds to choose 256 shots from over 100 000 candidates; the greedy table against the
+best of all on a small problem, and against the relaxed lower bound on the large one.
 """
 
 from __future__ import annotations

@@ -11,6 +11,7 @@ from recon.errors import InputError
 from recon.instrument import Instrument
 from recon.planning.tables import (
     FullRaster,
+    LowDiscrepancy,
     NoSensorGradient,
     SensorRing,
     Table,
@@ -21,7 +22,7 @@ from recon.planning.tables import (
 from recon.protocol import SpectralAxis
 from recon.specimen import Specimen
 
-RULES = ("raster", "uniform", "variable-density")
+RULES = ("raster", "uniform", "variable-density", "low-discrepancy")
 
 
 @click.command("protocol")
@@ -67,6 +68,7 @@ def verb(
     tables: dict[str, Table] = {
         "raster": FullRaster(**common),  # type: ignore[arg-type]
         "uniform": UniformRandom(shots=shots, **common),  # type: ignore[arg-type]
+        "low-discrepancy": LowDiscrepancy(shots=shots, **common),  # type: ignore[arg-type]
         "variable-density": VariableDensity(shots=shots, **common),  # type: ignore[arg-type]
     }
     if not sample_interval_ms > 0:

@@ -57,6 +57,7 @@ def sweep(
         axes.set_ylabel(rows[0])
         axes.tick_params(length=0)
         axes.spines[:].set_visible(False)
-        bar = figure.colorbar(image, label=f"{quantity} ({unit})", aspect=12)
+        axes.set_title(quantity, loc="left")
+        bar = figure.colorbar(image, label=unit, aspect=12)
         bar.outline.set_visible(False)
     return figure

@@ -14,6 +14,7 @@ from typing import Protocol as Interface
 
 import numpy as np
 from numpy.typing import ArrayLike, NDArray
+from scipy.stats import norm, qmc
 
 from recon.errors import InputError
 from recon.grid import Grid
@@ -232,6 +233,34 @@ class VariableDensity(_Drawn):
         """−|u / Nyquist|² / (2 width²)."""
         nyquist = np.array(grid.shape[:0:-1]) / 2
         return np.asarray(-((points / nyquist) ** 2).sum(axis=1) / (2 * self.width**2))
+
+
+@dataclass(frozen=True, kw_only=True)
+class LowDiscrepancy(VariableDensity):
+    """The Gaussian density of `VariableDensity`, filled evenly by a scrambled Halton sequence.
+
+    Points of the sequence pass through the normal quantile to the nearest free lattice point.
+    Source: Halton, Numerische Mathematik 2:84 (1960).
+    """
+
+    def object_steps(self, grid: Grid, random: np.random.Generator) -> tuple[Steps, Steps]:
+        """One sequence for each place in the turn of axes."""
+        low, high = _band(grid)
+        points, nyquist = lattice_points(grid), np.array(grid.shape[:0:-1]) / 2
+        axis = np.resize(np.array(self.axes, np.int64), self.shots)
+        chosen = np.empty((self.shots, 2), np.int64)
+        for turn in range(min(len(self.axes), self.shots)):
+            rows = np.arange(turn, self.shots, len(self.axes))
+            if len(rows) > len(points):
+                raise InputError(f"{len(rows)} shots on {len(points)} points", "table of shots")
+            sequence = qmc.Halton(2, rng=random)
+            free = np.ones(len(points), bool)
+            for row in rows:
+                wanted = norm.ppf(sequence.random(1)[0]) * self.width * nyquist
+                distance = ((points - np.clip(wanted, low, high)) ** 2).sum(axis=1)
+                place = int(np.argmin(np.where(free, distance, np.inf)))
+                free[place], chosen[row] = False, points[place]
+        return chosen, axis
 
 
 def lattice_points(grid: Grid) -> Steps:
