@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 import itertools
+from dataclasses import replace
 
 import numpy as np
 import pytest
@@ -25,7 +26,7 @@ from recon.planning.information import Scores
 from recon.planning.limits import Limits
 from recon.planning.relaxed import lower_bound
 from recon.planning.tables import UniformRandom, VariableDensity
-from recon.planning.trains import AncillaReadout, Hyperpolarised, Thermal
+from recon.planning.trains import AncillaReadout, Hyperpolarised, Thermal, in_train
 from recon.protocol import Protocol
 from recon.specimen import Species
 
@@ -271,6 +272,16 @@ def test_trains_by_hand():
     assert clock[4] - clock[3] == pytest.approx(62.0)
     assert AncillaReadout(30.0, 0.0).noise_gain(20e-6) == pytest.approx(30.0)
     assert AncillaReadout(30.0, 160.0).noise_gain(20e-6) == pytest.approx(10.0)
+
+
+def test_a_train_spends_the_magnetisation():
+    """A fill of 4 gives each shot half the signal; averages count as shots of the train."""
+    protocol = replace(table(6), averages=np.array([1, 1, 2, 1, 1, 1]))
+    spent = in_train(protocol, Hyperpolarised(1e9, 4, 60.0), 1.0)
+    np.testing.assert_allclose(np.abs(spent.amplitude), 0.5, rtol=1e-6)
+    assert spent.clock_time[3] - spent.clock_time[0] == pytest.approx(64.0)
+    full, half = (Bound.of(experiment(), p).standard_error() for p in (protocol, spent))
+    assert (half > full).all()
 
 
 @pytest.mark.parametrize(

@@ -14,7 +14,7 @@ from recon.planning.candidates import Candidates, camera_kinds, detector_kinds
 from recon.planning.choice import Budget, Choice, Criterion, MeanError, WorstError
 from recon.planning.feasibility import Feasibility
 from recon.planning.limits import Limits
-from recon.planning.trains import AncillaReadout
+from recon.planning.trains import AncillaReadout, Hyperpolarised, Thermal, in_train
 from recon.protocol import Protocol
 from recon.specimen import Specimen
 
@@ -41,6 +41,10 @@ CRITERIA: dict[str, Criterion] = {"mean": MeanError(), "worst": WorstError()}
 @click.option("--sample-interval-ms", type=float, default=8.0, show_default=True)
 @click.option("--shot-duration-s", type=float, default=1.0, show_default=True)
 @click.option("--duty-cycle", type=float, default=0.1, show_default=True, help="Largest.")
+@click.option("--train", type=click.Choice(["none", "thermal", "hyperpolarised"]), default="none")
+@click.option("--fills", type=click.IntRange(1), default=None, help="Times polarised, at most.")
+@click.option("--shots-per-fill", type=click.IntRange(1), default=16, show_default=True)
+@click.option("--fill-time-s", type=float, default=60.0, show_default=True)
 @click.option("--ancilla-gain", type=float, default=None, help="Repeated ancilla readout.")
 @click.option("--ancilla-dead-time-us", type=float, default=160.0, show_default=True)
 @click.option("--seed", type=int, default=0, show_default=True)
@@ -60,6 +64,10 @@ def verb(
     sample_interval_ms: float,
     shot_duration_s: float,
     duty_cycle: float,
+    train: str,
+    fills: int | None,
+    shots_per_fill: int,
+    fill_time_s: float,
     ancilla_gain: float | None,
     ancilla_dead_time_us: float,
     seed: int,
@@ -89,6 +97,8 @@ def verb(
             kinds = camera_kinds(axes, axial_rad_per_um)
         candidates = Candidates.of(sample.grid, apparatus, kinds, limits)
         count = shots if shots is not None or seconds is not None else 80
+        if train == "hyperpolarised" and fills is not None:
+            count = min(count or fills * shots_per_fill, fills * shots_per_fill)
         with progress_line() as line:
             chosen = Choice(CRITERIA[criterion], seed=seed).choose(
                 setting,
@@ -98,6 +108,12 @@ def verb(
                 line.counted("choosing shots"),
             )
         table = chosen.protocol
+        t1 = min(one.t1 for one in sample.species)
+        if train == "thermal":
+            table = in_train(table, Thermal(t1), shot_duration_s)
+        elif train == "hyperpolarised":
+            filled = Hyperpolarised(t1, shots_per_fill, fill_time_s)
+            table = in_train(table, filled, shot_duration_s)
         table.save(output)
         click.echo(f"{output}: {len(table)} shots of {candidates.count} candidates")
     present = [float(m[m > 0.01 * m.max()].mean()) if m.max() > 0 else 1e-9 for m in amounts]

@@ -59,7 +59,9 @@ class Feasibility:
     def seconds(self) -> float:
         """Time of the table with its averages, gradient pulses included."""
         shot = self.limits.shot_time(self.experiment.instrument, self.protocol.nuclear_wavevector)
-        return float((shot * self.protocol.averages).sum())
+        clock = self.protocol.clock_time
+        waited = float(clock[-1] - clock[0]) + float(shot[-1] * self.protocol.averages[-1])
+        return max(float((shot * self.protocol.averages).sum()), waited)
 
     def binding(self) -> dict[str, float]:
         """By what factor each limit is exceeded (above 1) or kept (below 1)."""

@@ -6,13 +6,14 @@ are polarised anew when the budget allows. Repeated ancilla readout trades dead 
 
 from __future__ import annotations
 
-from dataclasses import dataclass
+from dataclasses import dataclass, replace
 from typing import Protocol as Interface
 
 import numpy as np
 from numpy.typing import NDArray
 
 from recon.errors import InputError
+from recon.protocol import Protocol
 
 FloatArray = NDArray[np.floating]
 
@@ -80,6 +81,20 @@ class Hyperpolarised:
         cycle = self.fill_time_s + self.per_fill * shot_duration
         clock = self.fill_time_s + fill * cycle + inside * shot_duration
         return signal[inside], clock
+
+
+def in_train(protocol: Protocol, train: Train, shot_duration: float) -> Protocol:
+    """The same table with the amplitudes and clock times of a train, in the table's order.
+
+    Averages of a shot are taken as successive shots of the train; the shot has their r.m.s.
+    amplitude, which gives the same information.
+    """
+    averages = np.asarray(protocol.averages)
+    signal, clock = train.amplitudes(int(averages.sum()), shot_duration)
+    first = np.concatenate([[0], np.cumsum(averages)[:-1]])
+    power = np.add.reduceat(signal**2, first) / averages
+    amplitude = protocol.amplitude * np.sqrt(power)
+    return replace(protocol, amplitude=amplitude, clock_time=clock[first])
 
 
 @dataclass(frozen=True)
