@@ -59,9 +59,9 @@ class Scene:
         return float(np.sqrt(((off**2).sum(axes) / (self.truth**2).sum(axes)).mean()))
 
 
-def clean(name: str, specimen: Specimen) -> Record:
+def clean(name: str, specimen: Specimen, shots: int = max(SHOTS)) -> Record:
     """The record without noise, simulated once."""
-    protocol = VariableDensity(shots=max(SHOTS)).protocol(specimen.grid, TIMES)
+    protocol = VariableDensity(shots=shots).protocol(specimen.grid, TIMES)
     apparatus = view_of(specimen.grid)
     digest = sha256(specimen.description_json().encode() + protocol.digest().encode())
     digest.update(np.ascontiguousarray(specimen.concentrations).tobytes())
@@ -73,26 +73,32 @@ def clean(name: str, specimen: Specimen) -> Record:
     return Record.open(path)
 
 
+def scene_of(
+    name: str, specimen: Specimen, record: Record, shots: int, noise: float, seed: int = 0
+) -> Scene:
+    """The first shots of a clean record with Gaussian noise of `noise` times the stated."""
+    samples = np.concatenate([one.copy() for _, one in record.shots()])[:shots]
+    rng = np.random.default_rng(seed)
+    white = rng.standard_normal((*samples.shape, 2), np.float32).view(np.complex64)[..., 0]
+    basis = species_basis(specimen.species, record.instrument, record.protocol)
+    table_ = record.protocol.subset(np.arange(shots))
+    sd = record.noise_sd * noise
+    model = ForwardModel.build(specimen.grid, record.instrument, table_, basis, sd)
+    statistics = accumulate(model, [(slice(0, shots), samples + np.float32(sd * 0.5**0.5) * white)])
+    unit = 1 / statistics.sensitivity()
+    quadratic = BlockQuadratic(statistics.scaled(unit), real=True)
+    return Scene(name, noise, shots, quadratic, unit, specimen.concentrations)
+
+
 def scenes(names: tuple[str, ...], seed: int = 0) -> Iterator[Scene]:
     """All noise levels and shot counts."""
     makers = {"muscle": muscle_specimen, "micrograph": micrograph_specimen}
     for name in names:
         specimen = makers[name]()
         record = clean(name, specimen)
-        samples = np.concatenate([one.copy() for _, one in record.shots()])
-        rng = np.random.default_rng(seed)
-        white = rng.standard_normal((*samples.shape, 2), np.float32).view(np.complex64)[..., 0]
-        basis = species_basis(specimen.species, record.instrument, record.protocol)
         for shots in SHOTS:
-            table_ = record.protocol.subset(np.arange(shots))
             for noise in NOISES:
-                sd = record.noise_sd * noise
-                model = ForwardModel.build(specimen.grid, record.instrument, table_, basis, sd)
-                y = samples[:shots] + np.float32(sd / np.sqrt(2)) * white[:shots]
-                statistics = accumulate(model, [(slice(0, shots), y)])
-                unit = 1 / statistics.sensitivity()
-                quadratic = BlockQuadratic(statistics.scaled(unit), real=True)
-                yield Scene(name, noise, shots, quadratic, unit, specimen.concentrations)
+                yield scene_of(name, specimen, record, shots, noise, seed)
 
 
 def best_by_search(scene: Scene, priors: tuple[Prior, ...]) -> tuple[float, float]:

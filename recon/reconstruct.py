@@ -4,7 +4,7 @@ from __future__ import annotations
 
 import hashlib
 import importlib.metadata
-from collections.abc import Iterator
+from collections.abc import Iterator, Sequence
 from datetime import UTC, datetime
 from typing import Any
 
@@ -13,7 +13,7 @@ from numpy.typing import NDArray
 
 from recon.errors import InputError
 from recon.forward import BlockQuadratic, ForwardModel, Statistics, accumulate
-from recon.priors import Frame, NonNegative, TotalVariation
+from recon.priors import Frame, NonNegative, Prior, TotalVariation
 from recon.record import Record
 from recon.result import Account, Result
 from recon.solvers.estimate import Estimator, Progress, silent
@@ -58,7 +58,7 @@ def reconstruct(
     """
     unknown = unknown or SpeciesAmounts()
     estimator = estimator or default_estimator(unknown)
-    need = estimate_memory(record, unknown)
+    need = estimate_memory(record, unknown, estimator)
     if need > memory_limit_gib * 2**30:
         raise InputError(
             f"needs about {need / 2**30:.1f} GiB, the limit is {memory_limit_gib:g} GiB",
@@ -121,19 +121,30 @@ def read_statistics(
     return accumulate(model, reading.shots(), lambda done: progress("reading shots", done / total))
 
 
-def estimate_memory(record: Record, unknown: Unknown) -> int:
-    """Bytes that a reconstruction takes at its peak, roughly: cubes, blocks and their factors."""
-    components = unknown.basis(record).shape[1]
+def estimate_memory(record: Record, unknown: Unknown, estimator: Estimator | None = None) -> int:
+    """Bytes that a reconstruction takes at its peak, roughly: blocks, their factors, and images.
+
+    A solver keeps about seven arrays of the size of each prior's image D x, and eight of the
+    unknown's; eight copies of the blocks exist while errors or the first step are worked out.
+    """
+    components = unknown.components(record)
     grid = record.specimen.grid
-    cube = components * grid.size * (4 if unknown.real else 8)
+    shape = (components, *grid.shape)
+    cube = np.prod(shape) * (4 if unknown.real else 8)
+    frame = Frame(shape, grid.voxel, np.ones(components))
+    priors: Sequence[Prior] = getattr(estimator or default_estimator(unknown), "priors", ())
+    images = sum(prior.on(frame).redundancy for prior in priors)
+    one_detector = record.shape[2:] == (1, 1)
     pixel_y, pixel_x = (
-        max(1.0, p / d) for p, d in zip(record.instrument.pixel, grid.voxel[1:], strict=True)
+        1.0 if one_detector else max(1.0, pixel / edge)
+        for pixel, edge in zip(record.instrument.pixel, grid.voxel[1:], strict=True)
     )
-    aliases = 1.0 if len(record.shape) and record.shape[2:] == (1, 1) else pixel_y * pixel_x
-    coupled = components if unknown.real else 1
-    size = coupled * grid.shape[0] * aliases
-    blocks = 8 * size**2 * np.prod(grid.shape[1:]) / aliases
-    return int(24 * cube + 5 * blocks)
+    aliases = pixel_y * pixel_x
+    size = (components if unknown.real else 1) * grid.shape[0] * aliases
+    count = np.prod(grid.shape[1:]) / aliases
+    if unknown.real and aliases == 1:
+        count *= (grid.shape[2] // 2 + 1) / grid.shape[2]
+    return int((8 + 7 * images) * cube + 8 * (8 * size**2 * count))
 
 
 def provenance(reading: Reading, estimator: Any) -> dict[str, Any]:

@@ -35,6 +35,9 @@ class Unknown(Interface):
     def basis(self, record: Record) -> ComplexArray:
         """Φ (times, components), A/m per unit of each component."""
 
+    def components(self, record: Record) -> int:
+        """How many components are solved for, at most."""
+
     def compressed(self, statistics: Statistics) -> tuple[Statistics, ComplexArray | None]:
         """Fewer components where the unknown allows it, and the matrix that expands them."""
 
@@ -53,6 +56,9 @@ class SpeciesAmounts:
 
     def basis(self, record: Record) -> ComplexArray:
         return species_basis(self._species(record), record.instrument, record.protocol)
+
+    def components(self, record: Record) -> int:
+        return len(self._species(record))
 
     def compressed(self, statistics: Statistics) -> tuple[Statistics, ComplexArray | None]:
         return statistics, None
@@ -91,6 +97,10 @@ class ComplexCube:
 
     def basis(self, record: Record) -> ComplexArray:
         return time_basis(record.protocol)
+
+    def components(self, record: Record) -> int:
+        times = len(record.protocol.sample_times)
+        return min(self.vectors or times, times)
 
     def compressed(self, statistics: Statistics) -> tuple[Statistics, ComplexArray | None]:
         if self.vectors == 0:

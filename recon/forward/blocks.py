@@ -99,10 +99,15 @@ class BlockQuadratic:
 
     @cached_property
     def _root(self) -> BlockMatrix:
-        """Cholesky factors of the blocks, with a jitter at the rounding level."""
+        """L with L Lᴴ = G: Cholesky factors, jittered at the rounding level, or eigenvectors."""
         jitter = 1e-6 * float(np.einsum("gaab->", self.matrix.entries).real)
         jitter /= self.matrix.groups * self.matrix.size * self.matrix.blocks
-        return self.matrix.shifted(max(jitter, 1e-30)).factor()
+        try:
+            return self.matrix.shifted(max(jitter, 1e-30)).factor()
+        except np.linalg.LinAlgError:  # too few shots for every block to have full rank
+            values, vectors = self.spectrum
+            roots = vectors * np.sqrt(np.maximum(values, 0))[:, :, None]
+            return BlockMatrix(roots.transpose(0, 2, 3, 1), self.matrix.batch)
 
     def noise(self, random: np.random.Generator) -> Array:
         """A draw of Aᴴ W n, the noise of b for a record's noise n of the stated variance.

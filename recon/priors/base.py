@@ -51,11 +51,14 @@ class Term(ABC):
         R is 0 or infinite: the weight means nothing.
     auxiliary
         R is itself a minimum over an auxiliary field; see `image_near`.
+    redundancy
+        Size of D x over that of x.
     """
 
     symbol: Symbol = IDENTITY
     constraint: bool = False
     auxiliary: bool = False
+    redundancy: int = 1
 
     @property
     def tight(self) -> bool:
@@ -129,7 +132,13 @@ def soft_threshold(u: Array, threshold: Any) -> Array:
 
 def group_soft_threshold(u: Array, threshold: Any, axis: int = 0) -> Array:
     """Shrink vectors along an axis by their Euclidean length: the prox of threshold · ‖u‖₂."""
-    length = np.sqrt((u.real**2 + u.imag**2).sum(axis) if np.iscomplexobj(u) else (u**2).sum(axis))
+    parts = np.moveaxis(u, axis, 0)
+    length = np.zeros(parts.shape[1:], u.real.dtype)
+    for part in parts:
+        length += part.real**2
+        if np.iscomplexobj(part):
+            length += part.imag**2
+    np.sqrt(length, out=length)
     np.maximum(length, np.finfo(length.dtype).tiny, out=length)
     factor = np.maximum(1 - threshold / length, 0, dtype=length.dtype)
     return u * np.expand_dims(factor, axis)

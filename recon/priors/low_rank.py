@@ -87,6 +87,7 @@ class LocalLowRankTerm(Term):
 
     def __init__(self, patch: int, tilings: int) -> None:
         self._patch = patch
+        self.redundancy = tilings
         self._shifts = [round(place * patch / tilings) for place in range(tilings)]
 
     def analyse(self, x: Array) -> Array:

@@ -67,6 +67,7 @@ class TotalGeneralisedVariationTerm(Term):
     """Images (components, 12, nz, ny, nx): ∇x − w along (z, y, x), then E w, E w_y before E w_z."""
 
     auxiliary = True
+    redundancy = 12
 
     def __init__(self, frame: Frame, curvature_cost: float, joint: bool) -> None:
         self._gradient = Gradient(frame.shape, frame.voxel)

@@ -97,6 +97,8 @@ class Gradient:
 class TotalVariationTerm(Term):
     """∇ and the sum of its lengths."""
 
+    redundancy = 3
+
     def __init__(self, frame: Frame, joint: bool) -> None:
         self._gradient = Gradient(frame.shape, frame.voxel)
         self._joint = joint

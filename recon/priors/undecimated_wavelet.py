@@ -75,6 +75,7 @@ class UndecimatedWaveletTerm(Term):
     def __init__(self, bank: Any, levels: int, frame: Frame, joint: bool) -> None:
         self._filters, self.weights = _filters(bank, levels, frame.shape[-2:])
         self._joint = joint
+        self.redundancy = len(self._filters)
         self._cast: dict[str, ComplexArray] = {}
         if not bank.orthogonal:
             self.symbol = Symbol((np.abs(self._filters) ** 2).sum(axis=0))

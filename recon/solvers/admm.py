@@ -108,26 +108,31 @@ class ADMM:
         """One iteration, in place."""
         self._prepare(problem, state)
         alpha = state.u[0].real.dtype.type(self.over_relaxation)
-        targets = [u - d for u, d in zip(state.u, state.d, strict=True)]
         parts = list(zip(problem.terms, state._rho, strict=True))
-        pulled = [
-            part.term.adjoint(target * rho)
-            for (part, rho), target in zip(parts, targets, strict=True)
-        ]
+        right = problem.quadratic.linear
+        for (part, rho), u, d in zip(parts, state.u, state.d, strict=True):
+            target = u - d
+            target *= rho
+            right = right + part.term.adjoint(target)
         assert state._step is not None
-        x = state.x = state._step(reduce(add, pulled, problem.quadratic.linear), state.x)
+        x = state.x = state._step(right, state.x)
         sums = np.zeros(4)
         for place, (part, rho) in enumerate(parts):
-            image = part.term.image_near(x, targets[place])
-            before = state.u[place]
+            before, d = state.u[place], state.d[place]
+            if part.term.auxiliary:
+                image = part.term.image_near(x, before - d)
+            else:
+                image = part.term.analyse(x)
             relaxed = alpha * image
             relaxed += (1 - alpha) * before
-            relaxed += state.d[place]
+            relaxed += d
             u = part.term.prox(relaxed, part.weight / rho)
             state.u[place], state.d[place] = u, np.subtract(relaxed, u, out=relaxed)
             size = max(_squared(image, rho), _squared(u, rho))
-            changes = (image - u, u - before, state.d[place])
-            sums += [size, *(_squared(one, rho) for one in changes)]
+            off = np.subtract(image, u, out=None if image is x else image)
+            primal = _squared(off, rho)
+            moved = np.subtract(u, before, out=off)
+            sums += [size, primal, _squared(moved, rho), _squared(relaxed, rho)]
         scale, primal, dual, dual_scale = np.sqrt(sums)
         state.iteration += 1
         state.primal = relative(primal, scale)
