@@ -3,14 +3,18 @@
 from __future__ import annotations
 
 from collections.abc import Sequence
+from functools import cache
 
 import numpy as np
 from numpy.typing import NDArray
 from scipy import constants
 
+from recon.errors import InputError
 from recon.instrument import Instrument
 from recon.physics.magnetisation import polarised_magnetisation, thermal_polarisation
+from recon.physics.spins import time_signal
 from recon.protocol import Protocol
+from recon.species_table import SpinSpecies, species_named
 from recon.specimen import Species
 
 ComplexArray = NDArray[np.complexfloating]
@@ -22,15 +26,48 @@ def species_basis(
 ) -> ComplexArray:
     """Φ (times, species): magnetisation over time in A/m per mM of each species.
 
-    φ_s(t) = N_A n_s (γħP_s/2) exp(−i 2π (δ_s − δ_ref)·1e-6·f t − t/T2*_s), with n_s nuclei per
-    molecule, polarisation P_s (thermal where none is stated) and Larmor frequency f.
+    φ_s(t) = N_A n_s (γħP_s/2) c_s(t), with n_s nuclei per molecule, polarisation P_s (thermal where
+    none is stated) and the time course c_s of `time_course`.
     """
-    shift = np.array([one.shift_ppm for one in species]) - protocol.reference_shift_ppm
-    frequency = shift * 1e-6 * instrument.larmor_frequency
-    decay = 1 / np.array([one.t2_star for one in species])
-    rate = (decay + 2j * np.pi * frequency).astype(complex)
-    courses: ComplexArray = np.exp(-protocol.sample_times[:, None] * rate)
-    return courses * magnetisation_per_mM(species, instrument)
+    courses = [
+        time_course(one, instrument, protocol.sample_times, protocol.reference_shift_ppm)
+        for one in species
+    ]
+    return np.stack(courses, axis=1) * magnetisation_per_mM(species, instrument)
+
+
+def time_course(
+    species: Species, instrument: Instrument, times: FloatArray, reference_shift_ppm: float
+) -> ComplexArray:
+    """c(t), 1 at time 0, (times,): one line, or the exact lines of the species' spin system.
+
+    One line: exp(−i 2π (δ − δ_ref)·1e-6·f t − t/T2*), f the Larmor frequency. A spin system: its
+    lines at the bias field, strong coupling kept, over the number of its protons, times
+    exp(−t/T2*).
+
+    Raises
+    ------
+    InputError
+        The table has no such species, or it has another number of protons.
+    """
+    if species.spin_system is None:
+        shift = (species.shift_ppm - reference_shift_ppm) * 1e-6
+        rate = complex(1 / species.t2_star, 2 * np.pi * shift * instrument.larmor_frequency)
+        return np.exp(-np.asarray(times) * rate)
+    entry = _spin_species(species.spin_system)
+    if entry.protons != species.equivalent_nuclei:
+        raise InputError(
+            f"states {species.equivalent_nuclei} equivalent nuclei, its spin system has "
+            f"{entry.protons}",
+            f"species '{species.name}'",
+        )
+    lines = entry.lines(instrument.larmor_frequency, reference_shift_ppm)
+    return time_signal(lines, times, species.t2_star) / entry.protons
+
+
+@cache
+def _spin_species(name: str) -> SpinSpecies:
+    return SpinSpecies.from_toml(name) if name.endswith(".toml") else species_named(name)
 
 
 def magnetisation_per_mM(species: Sequence[Species], instrument: Instrument) -> FloatArray:  # noqa: N802

@@ -49,10 +49,12 @@ PositiveCount = Annotated[Count, Field(ge=1)]
 
 
 class Species(Description):
-    """One line of one molecule.
+    """One line of one molecule, or all lines of a spin system.
 
     `equivalent_nuclei` is the number of nuclei of one molecule in this line; without
-    `polarisation` the nuclei are at thermal equilibrium.
+    `polarisation` the nuclei are at thermal equilibrium. `spin_system` names an entry of the
+    species table, or a species file of one's own ending in .toml: its exact lines at the actual
+    field take the place of the one at `shift_ppm`, which then only labels the species.
     """
 
     name: Annotated[str, Field(min_length=1, max_length=60)]
@@ -63,6 +65,7 @@ class Species(Description):
     diffusion_um2_per_ms: Annotated[Number, Field(ge=0)]
     polarisation: Annotated[Number, Field(ge=0, le=1)] | None = None
     nucleus: Literal["1H"] = "1H"
+    spin_system: Annotated[str, Field(min_length=1)] | None = None
 
     @field_validator("name")
     @classmethod

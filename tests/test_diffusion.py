@@ -61,7 +61,7 @@ def test_slab_against_walkers(time):
 
 
 def test_propagators_compose():
-    """Two steps equal one of twice the time once layers resolve them (mean over layers is lossy)."""
+    """Two steps equal one of twice the time where the layers resolve them."""
     fine = slab_propagator(200, 24e-6, D, 2e-3)
     twice = slab_propagator(200, 24e-6, D, 4e-3)
     np.testing.assert_allclose(fine @ fine, twice, atol=2e-5)

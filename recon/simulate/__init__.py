@@ -21,6 +21,7 @@ from pathlib import Path
 import numpy as np
 from numpy.typing import NDArray
 
+from recon.basis import time_course
 from recon.errors import InputError, InputWarning
 from recon.instrument import Instrument, Readout
 from recon.physics import photons
@@ -134,10 +135,11 @@ def _time_courses(
     specimen: Specimen, instrument: Instrument, protocol: Protocol
 ) -> NDArray[np.complex64]:
     """φ_s(t), (times, species)."""
-    shift = np.array([s.shift_ppm for s in specimen.species]) - protocol.reference_shift_ppm
-    frequency = shift * 1e-6 * instrument.larmor_frequency
-    rate = 2j * np.pi * frequency + 1 / np.array([s.t2_star for s in specimen.species])
-    return np.exp(-protocol.sample_times[:, None] * rate).astype(np.complex64)
+    courses = [
+        time_course(one, instrument, protocol.sample_times, protocol.reference_shift_ppm)
+        for one in specimen.species
+    ]
+    return np.stack(courses, axis=1).astype(np.complex64)
 
 
 def _measure(
