@@ -50,7 +50,7 @@ SPECIES = tuple(
     for name, shift in (("lactate", 1.33), ("creatine", 3.03))
 )
 PRIOR = WaveletSparsity("db4", 4)
-AVERAGES = 64
+AVERAGES = 1
 RECORDS = ROOT / "bench" / ".records"
 
 

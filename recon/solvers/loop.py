@@ -3,6 +3,9 @@
 A method is settings plus three functions on a state it owns: `start`, `advance` and `residuals`.
 The state holds everything the next iteration needs, so a run can stop, be stored and go on, and
 2 + 2 iterations equal 4.
+
+Runs repeat bit for bit in one thread (`OMP_NUM_THREADS=1`): transforms use one thread anyway, and
+everything random has a seed in the settings.
 """
 
 from __future__ import annotations
