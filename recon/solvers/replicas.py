@@ -7,7 +7,7 @@ prior puts on an object like x̂. Source: Efron & Tibshirani, An Introduction to
 x̂ has already lost what the prior removes, so its replicas understate that loss. Two things make up
 for part of it: they stop after a few iterations, while they still follow their noise more than the
 converged estimate does, and a voxel's error is at least the r.m.s. of its neighbours' (one pinned
-at a bound has none of its own). `bench/coverage.py` measures what the intervals then cover.
+at a bound has none of its own). `bench/error_bars.py` measures what the intervals then cover.
 """
 
 from __future__ import annotations

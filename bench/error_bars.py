@@ -1,6 +1,6 @@
 """Do the error bars cover the truth? Intervals of re-noised replicas on simulated data.
 
-    python bench/coverage.py --json
+    python bench/error_bars.py --json
 
 For every species and depth: share of voxels whose truth lies within one standard error (68 %
 nominal) and 1.96 (95 %), share of bias in the stated mean squared error, and the time of all
