@@ -96,7 +96,9 @@ def spoilt_records(apparatus: Instrument) -> Iterator[Spoilt]:
     yield spoil("5 % dead pixels in clusters", np.where(dead, 0, y), ideal.without(dead))
     radius = np.hypot(*np.mgrid[-1:1:64j, -1:1:64j]) / np.sqrt(2)
     gain = (1 - 0.3 * radius**2) * np.exp(0.3j * smooth(shape, 8, 2))
-    yield spoil("gain map, 30 % vignetting", y * gain, ideal.with_gain(gain))
+    white = rng.standard_normal((2, *y.shape)) * np.sqrt((1 - np.abs(gain) ** 2) / 2) * noise
+    spoilt = y * gain + white[0] + 1j * white[1]  # a dimmer channel is not a quieter one
+    yield spoil("gain map, 30 % vignetting", spoilt, ideal.with_gain(gain))
     loud = np.where(smooth(shape, 2, 3) > 1.5, 3.0, 1.0)
     white = rng.standard_normal((2, *y.shape)) * np.sqrt((loud**2 - 1) / 2) * noise
     yield spoil("noisy channels", y + white[0] + 1j * white[1], ideal.with_noise(loud))
