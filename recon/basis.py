@@ -22,15 +22,19 @@ FloatArray = NDArray[np.floating]
 
 
 def species_basis(
-    species: Sequence[Species], instrument: Instrument, protocol: Protocol
+    species: Sequence[Species], instrument: Instrument, protocol: Protocol, evolution: float = 0.0
 ) -> ComplexArray:
     """Φ (times, species): magnetisation over time in A/m per mM of each species.
+
+    `evolution` seconds are added to the protocol's sample times.
 
     φ_s(t) = N_A n_s (γħP_s/2) c_s(t), with n_s nuclei per molecule, polarisation P_s (thermal where
     none is stated) and the time course c_s of `time_course`.
     """
     courses = [
-        time_course(one, instrument, protocol.sample_times, protocol.reference_shift_ppm)
+        time_course(
+            one, instrument, protocol.sample_times + evolution, protocol.reference_shift_ppm
+        )
         for one in species
     ]
     return np.stack(courses, axis=1) * magnetisation_per_mM(species, instrument)
@@ -85,6 +89,14 @@ def magnetisation_per_mM(species: Sequence[Species], instrument: Instrument) -> 
     )
 
 
-def time_basis(protocol: Protocol) -> ComplexArray:
-    """The identity (times, times): every time point is an unknown of its own, in A/m."""
-    return np.eye(len(protocol.sample_times), dtype=complex)
+def all_times(protocol: Protocol) -> FloatArray:
+    """Every time at which some shot is sampled, ascending; times closer than 1 ns are one."""
+    times = protocol.sample_times[:, None] + protocol.evolutions[0]
+    return np.unique(np.round(times, 9))
+
+
+def time_basis(protocol: Protocol, evolution: float = 0.0) -> ComplexArray:
+    """Rows of the identity (times, all times): every time is an unknown of its own, in A/m."""
+    every = all_times(protocol)
+    mine = np.round(protocol.sample_times + evolution, 9)
+    return (mine[:, None] == every).astype(complex)

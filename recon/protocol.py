@@ -8,7 +8,7 @@ time. All shots share their sample times.
 from __future__ import annotations
 
 import hashlib
-from dataclasses import dataclass, fields, replace
+from dataclasses import dataclass, field, fields, replace
 from enum import Enum
 from pathlib import Path
 from typing import Any
@@ -30,6 +30,7 @@ _PER_SHOT = (
     "amplitude",
     "averages",
     "clock_time",
+    "evolution_time",
 )
 
 
@@ -64,6 +65,10 @@ class Protocol:
         Start of the shot, seconds, float64 (shots,).
     sample_times
         Times of the samples after excitation, seconds, ascending, float64 (times,).
+    evolution_time
+        Time t1 that a shot evolves before its first sample, on top of `sample_times`, seconds,
+        float64 (shots,), not negative; zeros if not given. An indirect spectral axis is a table of
+        (k, q, t1), and any part of it may be left out.
     spectral_axis
         How the spectral axis is sampled.
     reference_shift_ppm
@@ -83,6 +88,7 @@ class Protocol:
     averages: NDArray[np.int64]
     clock_time: NDArray[np.float64]
     sample_times: NDArray[np.float64]
+    evolution_time: NDArray[np.float64] = field(default_factory=lambda: np.zeros(0))
     spectral_axis: SpectralAxis = SpectralAxis.LISTEN_AFTER_ENCODING
     reference_shift_ppm: float = REFERENCE_SHIFT_PPM
 
@@ -96,6 +102,9 @@ class Protocol:
         self._set("amplitude", np.complex128)
         self._set("averages", np.int64)
         self._set("clock_time", np.float64)
+        if not np.size(self.evolution_time):
+            object.__setattr__(self, "evolution_time", np.zeros(shots))
+        self._set("evolution_time", np.float64)
         for name in _PER_SHOT:
             rows = len(getattr(self, name))
             if rows != shots:
@@ -133,6 +142,9 @@ class Protocol:
         if wrong.size:
             what = f"shot {wrong[0]} has {self.averages[wrong[0]]} averages"
             raise InputError(what, KIND, "use at least 1")
+        wrong = np.flatnonzero(self.evolution_time < 0)
+        if wrong.size:
+            raise InputError(f"shot {wrong[0]} has a negative evolution_time", KIND)
         times = self.sample_times
         if times.size == 0 or times[0] < 0 or (np.diff(times) <= 0).any():
             raise InputError("sample_times must ascend from 0 s or later", KIND)
@@ -180,6 +192,12 @@ class Protocol:
         """The shots picked by a slice, by positions or by a mask, in that order."""
         picked = indices if isinstance(indices, slice) else np.asarray(indices)
         return replace(self, **{name: getattr(self, name)[picked] for name in _PER_SHOT})
+
+    @property
+    def evolutions(self) -> tuple[NDArray[np.float64], NDArray[np.intp]]:
+        """The different evolution times, ascending, and which of them each shot has."""
+        times, place = np.unique(self.evolution_time, return_inverse=True)
+        return times, place
 
     def digest(self) -> str:
         """SHA-256 of the contents, hexadecimal; equal tables have equal digests."""

@@ -12,7 +12,8 @@ import numpy as np
 from numpy.typing import NDArray
 
 from recon.errors import InputError
-from recon.forward import BlockQuadratic, ForwardModel, Statistics, accumulate
+from recon.forward import ForwardModel, Statistics, accumulate
+from recon.forward.grouped import GroupedStatistics, accumulate_grouped, data_term
 from recon.priors import Frame, NonNegative, Prior, TotalVariation
 from recon.record import Record
 from recon.result import Account, Result
@@ -75,7 +76,7 @@ def reconstruct(
             "check sensing axes, gradients and sample times",
         )
     unit = 1 / sensitivity
-    quadratic = BlockQuadratic(statistics.scaled(unit), unknown.real)
+    quadratic = data_term(statistics.scaled(unit), unknown.real)
     frame = Frame(quadratic.shape, statistics.grid.voxel, unit)
     estimate = estimator.estimate(quadratic, frame, progress).in_units(unit)
     account = Account(
@@ -110,15 +111,27 @@ class Reading:
 
 def read_statistics(
     reading: Reading | Record, unknown: Unknown, progress: Progress = silent
-) -> Statistics:
+) -> Statistics | GroupedStatistics:
     """One pass over the record: b, G, energy."""
     record = reading.record if isinstance(reading, Reading) else reading
-    basis = unknown.basis(record)
-    model = ForwardModel.build(
-        record.specimen.grid, record.instrument, record.protocol, basis, record.noise_sd
-    )
-    total = len(record)
-    return accumulate(model, reading.shots(), lambda done: progress("reading shots", done / total))
+    evolutions, group = record.protocol.evolutions
+    models = [
+        ForwardModel.build(
+            record.specimen.grid,
+            record.instrument,
+            record.protocol,
+            unknown.basis(record, float(evolution)),
+            record.noise_sd,
+        )
+        for evolution in evolutions
+    ]
+
+    def show(done: int) -> None:
+        progress("reading shots", done / len(record))
+
+    if len(models) == 1:
+        return accumulate(models[0], reading.shots(), show)
+    return accumulate_grouped(models, group, reading.shots(), show)
 
 
 def estimate_memory(record: Record, unknown: Unknown, estimator: Estimator | None = None) -> int:

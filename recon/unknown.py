@@ -9,15 +9,17 @@ from typing import Protocol as Interface
 import numpy as np
 from numpy.typing import NDArray
 
-from recon.basis import species_basis, time_basis
+from recon.basis import all_times, species_basis, time_basis
 from recon.errors import InputError
 from recon.forward import Statistics
+from recon.forward.grouped import GroupedStatistics
 from recon.record import Record
 from recon.result import Account, Cube, Result, SpeciesMaps
 from recon.solvers.estimate import Estimate
 from recon.specimen import Species
 
 ComplexArray = NDArray[np.complexfloating]
+AnyStatistics = Statistics | GroupedStatistics
 
 
 class Unknown(Interface):
@@ -32,13 +34,13 @@ class Unknown(Interface):
     @property
     def real(self) -> bool: ...
 
-    def basis(self, record: Record) -> ComplexArray:
-        """Φ (times, components), A/m per unit of each component."""
+    def basis(self, record: Record, evolution: float = 0.0) -> ComplexArray:
+        """Φ (times, components), A/m per unit of each component, of shots that evolve so long."""
 
     def components(self, record: Record) -> int:
         """How many components are solved for, at most."""
 
-    def compressed(self, statistics: Statistics) -> tuple[Statistics, ComplexArray | None]:
+    def compressed(self, statistics: AnyStatistics) -> tuple[AnyStatistics, ComplexArray | None]:
         """Fewer components where the unknown allows it, and the matrix that expands them."""
 
     def result(
@@ -54,13 +56,13 @@ class SpeciesAmounts:
     species: tuple[Species, ...] = ()
     real: bool = True
 
-    def basis(self, record: Record) -> ComplexArray:
-        return species_basis(self._species(record), record.instrument, record.protocol)
+    def basis(self, record: Record, evolution: float = 0.0) -> ComplexArray:
+        return species_basis(self._species(record), record.instrument, record.protocol, evolution)
 
     def components(self, record: Record) -> int:
         return len(self._species(record))
 
-    def compressed(self, statistics: Statistics) -> tuple[Statistics, ComplexArray | None]:
+    def compressed(self, statistics: AnyStatistics) -> tuple[AnyStatistics, ComplexArray | None]:
         return statistics, None
 
     def result(
@@ -84,7 +86,8 @@ class ComplexCube:
     """Magnetisation in A/m at every sample time, without a line list.
 
     The time axis is first compressed to the leading left singular vectors of b: those that stand
-    above the noise (Marchenko & Pastur's edge; Math. USSR Sbornik 1:457, 1967).
+    above the noise (Marchenko & Pastur's edge; Math. USSR Sbornik 1:457, 1967). Where shots have
+    different evolution times every time is kept.
 
     Attributes
     ----------
@@ -95,15 +98,15 @@ class ComplexCube:
     vectors: int | None = None
     real: bool = False
 
-    def basis(self, record: Record) -> ComplexArray:
-        return time_basis(record.protocol)
+    def basis(self, record: Record, evolution: float = 0.0) -> ComplexArray:
+        return time_basis(record.protocol, evolution)
 
     def components(self, record: Record) -> int:
-        times = len(record.protocol.sample_times)
+        times = len(all_times(record.protocol))
         return min(self.vectors or times, times)
 
-    def compressed(self, statistics: Statistics) -> tuple[Statistics, ComplexArray | None]:
-        if self.vectors == 0:
+    def compressed(self, statistics: AnyStatistics) -> tuple[AnyStatistics, ComplexArray | None]:
+        if self.vectors == 0 or isinstance(statistics, GroupedStatistics):
             return statistics, None
         count = len(statistics.linear)
         b = statistics.linear.reshape(count, -1)
@@ -136,7 +139,7 @@ class ComplexCube:
             standard_error=error,
             resolution=width,
             account=account,
-            sample_times=record.protocol.sample_times,
+            sample_times=all_times(record.protocol),
             larmor_frequency=record.instrument.larmor_frequency,
             reference_shift_ppm=record.protocol.reference_shift_ppm,
         )

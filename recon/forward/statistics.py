@@ -126,7 +126,7 @@ def accumulate(
                     f"shots {shots.start} to {shots.stop - 1}",
                 )
             for shot, one in zip(range(shots.start, shots.stop), samples, strict=True):
-                energy += _squared(one, shot) * weight[shot]
+                energy += squared_norm(one, shot) * weight[shot]
             yield shots, samples
             done += len(samples)
             if progress is not None:
@@ -138,7 +138,7 @@ def accumulate(
     return Statistics(model.grid, layout, linear, normal, gram, energy, model.sample_count)
 
 
-def _squared(samples: ComplexArray, shot: int) -> float:
+def squared_norm(samples: ComplexArray, shot: int) -> float:
     """‖y‖² of one shot, refused if a sample is not finite."""
     flat = samples.ravel().view(np.float32)
     square = float(np.dot(flat, flat))

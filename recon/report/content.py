@@ -21,6 +21,8 @@ from recon.result import Cube, SpeciesMaps
 from recon.specimen import Species
 
 FloatArray = NDArray[np.floating]
+SUSPECT = 1.5
+MOST = 32767
 
 
 @dataclass(frozen=True, eq=False)
@@ -77,6 +79,7 @@ class Content:
         """Everything but the arrays."""
         grid, account = self.maps.grid, self.maps.account
         ppm, _ = self.cube.spectrum()
+        rows = believable(self.maps, self.truth)
         return {
             "title": self.title,
             "notes": self.notes,
@@ -91,23 +94,26 @@ class Content:
             "amount_colours": _colours(style.AMOUNTS),
             "error_colours": _colours(style.ERRORS),
             "label_meaning": {str(int(k)): text for k, text in MEANING.items()},
-            "believe": believable(self.maps, self.truth),
+            "believe": rows,
+            "verdict": verdict(rows, self.maps.grid),
             "remarks": [*account.remarks],
             "measured": self._measured(),
             "done": self._done(),
         }
 
     def arrays(self) -> dict[str, str]:
-        """Base64 of little-endian float32 arrays, and of the labels as bytes."""
+        """Base64 of little-endian arrays: float32; the spectrum int16 in quanta of its voxel."""
         _, spectrum = self.cube.spectrum()
         error = self.cube.standard_error
         assert error is not None
         assert self.maps.standard_error is not None
         spread = self.cube.dwell * np.sqrt((error.astype(float) ** 2).sum(axis=0) / 2)
+        numbers, quantum = quantised(spectrum.real)
         packed = {
             "values": _packed(self.maps.values),
             "errors": _packed(self.maps.standard_error),
-            "spectrum": _packed(spectrum.real),
+            "spectrum": base64.b64encode(numbers.tobytes()).decode(),
+            "quantum": _packed(quantum),
             "spread": _packed(spread),
             "shapes": _packed(self.shapes()),
             "labels": base64.b64encode(readability(self.maps).tobytes()).decode(),
@@ -150,23 +156,64 @@ class Content:
 
 
 def believable(maps: SpeciesMaps, truth: FloatArray | None) -> list[dict[str, Any]]:
-    """Per species and plane: r.m.s. standard error, share of readable voxels, true error."""
+    """Per species and plane, what can be said of its errors.
+
+    `error_mM`: r.m.s. standard error; `readable`: share of voxels above the detection limit;
+    `width_um`: width of a point along (x, y), None where undefined. With a truth also
+    `true_error_mM` (r.m.s.), `inside`: share of voxels within two standard errors of it, and
+    `off`: whether the true error is more than `SUSPECT` times the standard error.
+    """
     assert maps.standard_error is not None
     labels = readability(maps)
     rows = []
     for place, name in enumerate(maps.names):
-        error = np.sqrt((maps.standard_error[place].astype(float) ** 2).mean(axis=(1, 2)))
+        spread = maps.standard_error[place].astype(float)
+        error = np.sqrt((spread**2).mean(axis=(1, 2)))
         readable = np.isin(labels[place], (1, 2)).mean(axis=(1, 2))
         row: dict[str, Any] = {
             "name": name,
             "error_mM": error.tolist(),
             "readable": readable.tolist(),
         }
+        if maps.resolution is not None:
+            widths = maps.resolution[place][:, :0:-1] * 1e6
+            row["width_um"] = [
+                [float(w) if np.isfinite(w) else None for w in pair] for pair in widths
+            ]
         if truth is not None:
             off = maps.values[place].astype(float) - truth[place]
-            row["true_error_mM"] = np.sqrt((off**2).mean(axis=(1, 2))).tolist()
+            size = np.sqrt((off**2).mean(axis=(1, 2)))
+            row["true_error_mM"] = size.tolist()
+            row["inside"] = (np.abs(off) <= 2 * spread).mean(axis=(1, 2)).tolist()
+            row["off"] = (size > SUSPECT * error).tolist()
         rows.append(row)
     return rows
+
+
+def verdict(rows: Sequence[dict[str, Any]], grid: Grid) -> list[str]:
+    """Lines that say where a known truth contradicts the standard errors."""
+    if "off" not in rows[0]:
+        return []
+    heights = [f"{height * 1e6:.3g}" for height in grid.heights]
+    bad = []
+    for row in rows:
+        where = [height for height, off in zip(heights, row["off"], strict=True) if off]
+        bad += [f"{row['name']} at {', '.join(where)} µm"] if where else []
+    if not bad:
+        return ["The truth is known here, and the standard errors agree with it in every plane."]
+    return [
+        f"The truth is known here, and lies further off than {SUSPECT:g} times the standard error "
+        f"(marked ▲): {'; '.join(bad)}. The prior does not hold there; do not rely on these errors."
+    ]
+
+
+def quantised(curves: FloatArray) -> tuple[NDArray[np.int16], NDArray[np.float32]]:
+    """Curves (f, …) as whole numbers and the size of one (…): within 2e-5 of each curve's peak."""
+    if not np.isfinite(curves).all():
+        raise InputError("a value is not finite", "report")
+    quantum = (np.abs(curves).max(axis=0) / MOST).astype(np.float32)
+    safe = np.where(quantum > 0, quantum, 1)
+    return np.rint(curves / safe).clip(-MOST, MOST).astype("<i2"), quantum
 
 
 def _traces(provenance: Any) -> list[tuple[str, Any]]:

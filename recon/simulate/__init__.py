@@ -134,12 +134,15 @@ def simulate(
 def _time_courses(
     specimen: Specimen, instrument: Instrument, protocol: Protocol
 ) -> NDArray[np.complex64]:
-    """φ_s(t), (times, species)."""
+    """φ_s(t) of each evolution time, (evolutions, times, species)."""
     courses = [
-        time_course(one, instrument, protocol.sample_times, protocol.reference_shift_ppm)
-        for one in specimen.species
+        [
+            time_course(one, instrument, protocol.sample_times + t, protocol.reference_shift_ppm)
+            for one in specimen.species
+        ]
+        for t in protocol.evolutions[0]
     ]
-    return np.stack(courses, axis=1).astype(np.complex64)
+    return np.asarray(courses).transpose(0, 2, 1).astype(np.complex64)
 
 
 def _measure(
@@ -151,8 +154,9 @@ def _measure(
     seed: int,
 ) -> Iterator[Samples]:
     """Samples (times, cy, cx) of one shot after the other."""
+    group = protocol.evolutions[1]
     for shot, image in enumerate(images):
-        field = np.tensordot(courses, image, 1)
+        field = np.tensordot(courses[group[shot]], image, 1)
         generator = np.random.default_rng([seed, shot])
         yield noise.samples(field, instrument.readout, int(protocol.averages[shot]), generator)
 
