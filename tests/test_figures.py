@@ -7,6 +7,7 @@ import pytest
 
 from recon import figures
 from recon.errors import InputError
+from recon.grid import Grid
 from tests import results
 
 GRID = results.grid()
@@ -116,6 +117,15 @@ def test_planes_lie_as_in_the_slice():
     labels = [axis.get_ylabel() for axis in figure.axes if axis.get_ylabel()]
     assert labels[0] == "11 µm"
     assert labels[-1] == "3 µm"
+
+
+def test_many_planes_stay_on_one_page():
+    many = Grid((20, 4, 5), GRID.voxel)
+    values = np.ones(many.shape)
+    figure = figures.depth_stack(values, values, many, quantity="lactate", unit="mM")
+    assert figure.get_size_inches()[1] <= 9.01
+    labels = [axis.get_ylabel() for axis in figure.axes if axis.get_ylabel()]
+    assert (labels[0], labels[-1], len(labels)) == ("78 µm", "2 µm", 8)
 
 
 @pytest.mark.parametrize(

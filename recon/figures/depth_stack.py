@@ -14,6 +14,8 @@ from recon.grid import Grid
 
 FloatArray = NDArray[np.floating]
 COLUMNS = 2
+MOST_PLANES = 8
+TALLEST = 9.0
 
 
 def depth_stack(
@@ -24,7 +26,9 @@ def depth_stack(
     quantity: str,
     unit: str,
 ) -> Figure:
-    """Amounts at the left, standard errors at the right, every plane, one scale per column.
+    """Amounts at the left, standard errors at the right, one scale per column.
+
+    Of more than eight planes, eight are drawn, the lowest and the highest among them.
 
     Parameters
     ----------
@@ -37,19 +41,20 @@ def depth_stack(
         Maps that are complex or do not fit the grid.
     """
     checked({quantity: values, "standard error": standard_error}, grid, None)
-    nz = grid.shape[0]
+    nz = min(grid.shape[0], MOST_PLANES)
+    planes = np.linspace(0, grid.shape[0] - 1, nz).round().astype(int)
     left, right, bottom, top = style.extent_um(grid)
     aspect = (top - bottom) / (right - left)
-    panel = 1.35
+    panel = min(1.35, (TALLEST - 1.15) / (nz * aspect))
     with style.applied():
-        figure = style.new_figure(COLUMNS * panel + 0.5, nz * panel * aspect + 1.15)
+        figure = style.new_figure(COLUMNS * max(panel, 1.35) + 0.5, nz * panel * aspect + 1.15)
         axes: NDArray[Any] = figure.subplots(nz, COLUMNS, squeeze=False)
         for column, (name, maps) in enumerate(
             {quantity: values, "standard error": standard_error}.items()
         ):
             low, high = amount_limits([maps])
             images = []
-            for row, panel_axes in enumerate(axes[::-1, column]):
+            for row, panel_axes in zip(planes, axes[::-1, column], strict=True):
                 images.append(
                     panel_axes.imshow(
                         np.ma.masked_invalid(maps[row]),
@@ -70,7 +75,7 @@ def depth_stack(
             )
             bar.outline.set_visible(False)
             bar.ax.locator_params(nbins=3)
-        for row, panel_axes in enumerate(axes[::-1, 0]):
+        for row, panel_axes in zip(planes, axes[::-1, 0], strict=True):
             panel_axes.set_ylabel(style.micrometres(grid.heights[row]))
         style.scale_bar(axes[-1, 0])
         figure.supylabel("height above the diamond", fontsize=10)

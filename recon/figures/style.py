@@ -39,6 +39,7 @@ ENDINGS = (".png", ".pdf", ".svg")
 
 INK = "#202020"
 FAINT = "#8a8a8a"
+MISSING = "#bdbdbd"
 TRUTH = "#202020"
 LINES = ("#0072B2", "#D55E00", "#009E73", "#CC79A7", "#56B4E9", "#E69F00")
 DASHES: tuple[Any, ...] = ("-", (0, (5, 1.6)), (0, (1.2, 1.2)), (0, (6, 1.5, 1.2, 1.5)))
@@ -120,9 +121,7 @@ def diverging(
     hue = np.radians(np.where(np.arange(share.size) < side.size, low_hue, high_hue))
     light = 96 + (lightness - 96) * share
     lab = np.stack([light, chroma * share * np.cos(hue), chroma * share * np.sin(hue)], axis=-1)
-    colours = ListedColormap(lab_to_srgb(lab), name="recon_errors")
-    colours.set_bad("#bdbdbd")
-    return colours
+    return ListedColormap(lab_to_srgb(lab), name="recon_errors").with_extremes(bad=MISSING)
 
 
 def lab_to_srgb(lab: FloatArray) -> FloatArray:
@@ -140,9 +139,7 @@ def lab_to_srgb(lab: FloatArray) -> FloatArray:
 
 
 def _amounts() -> Colormap:
-    colours = matplotlib.colormaps["cividis"].copy()
-    colours.set_bad("#bdbdbd")
-    return colours
+    return matplotlib.colormaps["cividis"].with_extremes(bad=MISSING)
 
 
 AMOUNTS = _amounts()

@@ -115,6 +115,8 @@ list("measured", facts.measured); list("done", facts.done); believe();
 let waiting = 0;
 addEventListener("resize", () => { cancelAnimationFrame(waiting); waiting = requestAnimationFrame(draw); });
 
+matchMedia("print").addEventListener("change", draw);
+
 // Begin where there is most to see: the species with the strongest contrast in the lowest plane.
 const contrast = facts.names.map((_, s) => {
   const part = values.subarray(s * volume, s * volume + plane);
