@@ -202,9 +202,9 @@ class Protocol:
     def digest(self) -> str:
         """SHA-256 of the contents, hexadecimal; equal tables have equal digests."""
         total = hashlib.sha256()
-        for field in fields(self):
-            value = getattr(self, field.name)
-            total.update(field.name.encode())
+        for one in fields(self):
+            value = getattr(self, one.name)
+            total.update(one.name.encode())
             if isinstance(value, np.ndarray):
                 total.update(str(value.shape).encode())
                 total.update(value.astype(value.dtype.newbyteorder("<")).tobytes())

@@ -5,6 +5,7 @@ from __future__ import annotations
 import hashlib
 import importlib.metadata
 from collections.abc import Iterator, Sequence
+from dataclasses import dataclass
 from datetime import UTC, datetime
 from typing import Any
 
@@ -13,13 +14,20 @@ from numpy.typing import NDArray
 
 from recon.errors import InputError
 from recon.forward import ForwardModel, Statistics, accumulate
+from recon.forward.channels import Channels, LayerDensity
+from recon.forward.general import GeneralOperator
+from recon.forward.general_model import GeneralModel
+from recon.forward.general_statistics import gather
 from recon.forward.grouped import GroupedStatistics, accumulate_grouped, data_term
 from recon.priors import Frame, NonNegative, Prior, TotalVariation
 from recon.record import Record
 from recon.result import Account, Result
 from recon.solvers.estimate import Estimator, Progress, silent
+from recon.solvers.general import GeneralQuadratic
 from recon.solvers.penalised import Penalised
 from recon.unknown import SpeciesAmounts, Unknown
+
+ComplexArray = NDArray[np.complexfloating]
 
 
 def default_estimator(unknown: Unknown) -> Estimator:
@@ -36,6 +44,7 @@ def reconstruct(
     *,
     progress: Progress = silent,
     memory_limit_gib: float = 8.0,
+    reality: Reality | None = None,
 ) -> Result:
     """Reconstruct a record on its specimen's grid.
 
@@ -51,6 +60,8 @@ def reconstruct(
         Called with what is being done and its share done.
     memory_limit_gib
         The work is refused if it would need more.
+    reality
+        What channels, layer and wavevectors really are, where that breaks the blocks.
 
     Raises
     ------
@@ -67,8 +78,14 @@ def reconstruct(
             "raise the limit, or use fewer voxels or species",
         )
     reading = Reading(record)
-    statistics, expand = unknown.compressed(read_statistics(reading, unknown, progress))
-    sensitivity = statistics.sensitivity()
+    expand: ComplexArray | None = None
+    whole: Any
+    if reality is None:
+        statistics, expand = unknown.compressed(read_statistics(reading, unknown, progress))
+        whole, sensitivity = data_term(statistics, unknown.real), statistics.sensitivity()
+    else:
+        whole = reality.data_term(reading, unknown, progress)
+        sensitivity = np.sqrt(whole.diagonal().mean(axis=1))
     if not (sensitivity > 1e-6 * sensitivity.max()).all() or sensitivity.max() == 0:
         raise InputError(
             f"the record is blind to component {int(np.argmin(sensitivity)) + 1}",
@@ -76,8 +93,8 @@ def reconstruct(
             "check sensing axes, gradients and sample times",
         )
     unit = 1 / sensitivity
-    quadratic = data_term(statistics.scaled(unit), unknown.real)
-    frame = Frame(quadratic.shape, statistics.grid.voxel, unit)
+    quadratic = whole.scaled(unit)
+    frame = Frame(quadratic.shape, record.specimen.grid.voxel, unit)
     estimate = estimator.estimate(quadratic, frame, progress).in_units(unit)
     account = Account(
         prior=str(estimator),
@@ -88,6 +105,46 @@ def reconstruct(
         remarks=estimate.remarks,
     )
     return unknown.result(record, estimate, expand, account)
+
+
+@dataclass(frozen=True)
+class Reality:
+    """What a real apparatus adds to the ideal model; the general operator then takes its place.
+
+    Wavevectors may lie off the lattice. The grid must be the camera's view.
+
+    Attributes
+    ----------
+    channels
+        Gain and relative weight of every channel: dead pixels, vignetting, noise of their own.
+    layer
+        Density of the sensor layer, where it is patchy.
+    """
+
+    channels: Channels | None = None
+    layer: LayerDensity | None = None
+
+    def data_term(
+        self, reading: Reading, unknown: Unknown, progress: Progress = silent
+    ) -> GeneralQuadratic:
+        """The data term of a record, read once."""
+        record = reading.record
+        model = GeneralModel.build(
+            record.specimen.grid,
+            record.instrument,
+            record.protocol,
+            unknown.basis(record),
+            record.noise_sd,
+            channels=self.channels,
+            layer=self.layer,
+        )
+        if len(record.protocol.evolutions[0]) > 1:
+            raise InputError("has several evolution times", "protocol", "use the ideal model")
+        operator = GeneralOperator(model, np.complex64)
+        statistics = gather(
+            operator, reading.shots(), lambda done: progress("reading shots", done / len(record))
+        )
+        return GeneralQuadratic(operator, statistics, unknown.real)
 
 
 class Reading:

@@ -9,6 +9,7 @@ import numpy as np
 
 from recon.cli.common import progress_line
 from recon.errors import InputError
+from recon.forward.channels import Channels
 from recon.priors import (
     LocalLowRank,
     LowRank,
@@ -19,7 +20,7 @@ from recon.priors import (
     UndecimatedWaveletSparsity,
     WaveletSparsity,
 )
-from recon.reconstruct import reconstruct
+from recon.reconstruct import Reality, reconstruct
 from recon.record import Record
 from recon.result import Cube, Result, SpeciesMaps
 from recon.solvers.estimate import Estimator
@@ -55,6 +56,15 @@ RIDGE = "ridge"
 )
 @click.option("--weight", type=float, default=None, help="Of the prior; by default it is chosen.")
 @click.option("--replicas", type=int, default=50, show_default=True, help="For errors; 0: none.")
+@click.option(
+    "--channel-gain",
+    type=click.Path(path_type=Path),
+    default=None,
+    help="NumPy file (rows, columns): gain of every channel, 0 where it is dead.",
+)
+@click.option(
+    "--off-lattice", is_flag=True, help="Take wavevectors as stated, not on the grid's lattice."
+)
 @click.option("--memory-limit-gib", type=float, default=8.0, show_default=True)
 def verb(
     record: Path,
@@ -63,6 +73,8 @@ def verb(
     priors: tuple[str, ...],
     weight: float | None,
     replicas: int,
+    channel_gain: Path | None,
+    off_lattice: bool,
     memory_limit_gib: float,
 ) -> None:
     """Amounts of the RECORD's species in mM, or its complex cube, with standard errors."""
@@ -75,10 +87,32 @@ def verb(
             estimator_named(names, unknown, weight, replicas),
             progress=line,
             memory_limit_gib=memory_limit_gib,
+            reality=reality_of(channel_gain, off_lattice),
         )
     assert isinstance(result, (SpeciesMaps, Cube))
     result.save(output)
     click.echo(f"{output}: {summary(result)}")
+
+
+def reality_of(channel_gain: Path | None, off_lattice: bool) -> Reality | None:
+    """What departs from the ideal model; None if nothing does.
+
+    Raises
+    ------
+    InputError
+        The file holds no two-dimensional table of finite numbers.
+    """
+    if channel_gain is None:
+        return Reality() if off_lattice else None
+    try:
+        gain = np.load(channel_gain, allow_pickle=False)
+    except (OSError, ValueError, EOFError) as error:
+        raise InputError(f"cannot be read ({error})", str(channel_gain)) from error
+    if gain.ndim != 2 or not np.issubdtype(gain.dtype, np.number):
+        raise InputError(f"shape {gain.shape}", str(channel_gain), "give rows x columns of numbers")
+    dead = gain == 0
+    channels = Channels.ideal(gain.shape).with_gain(np.where(dead, 1, gain)).without(dead)
+    return Reality(channels)
 
 
 def estimator_named(

@@ -74,7 +74,7 @@ class GroupedStatistics:
 
     def sensitivity(self) -> FloatArray:
         """Square root of the mean diagonal of G per component: signal-to-noise of one unit."""
-        mean = 0.0
+        mean = np.zeros(len(self.grams[0]))
         for gram, normal in zip(self.grams, self.normals, strict=True):
             share = float(np.einsum("aayx->", normal).real)
             share /= len(normal) * float(np.prod(self.layout.blocks))

@@ -1,6 +1,6 @@
 """Encodings to choose from: every lateral lattice wavevector for every kind of shot.
 
-A *kind* is a sensing axis, an axial wavenumber and a sensor wavevector; its response to an object
+A *kind* is a sensing axis, an axial wavenumber, a sensor wavevector and an evolution time; its response to an object
 frequency depends on κ' + k alone, so all lateral nuclear wavevectors of a kind are shifts of one
 another and are scored together by a correlation.
 """
@@ -15,7 +15,7 @@ from numpy.typing import NDArray
 from recon.errors import InputError
 from recon.grid import Grid
 from recon.instrument import Instrument
-from recon.planning.limits import Limits
+from recon.planning.limits import Limits, Loss
 from recon.protocol import REFERENCE_SHIFT_PPM, Protocol, SpectralAxis
 
 FloatArray = NDArray[np.floating]
@@ -24,11 +24,24 @@ IntArray = NDArray[np.integer]
 
 @dataclass(frozen=True)
 class Kind:
-    """What shots may share: sensing axis 1 to 4, k_z in rad/m, q in lattice steps (y, x)."""
+    """What shots may share.
+
+    Attributes
+    ----------
+    axis
+        Sensing axis, 1 to 4.
+    axial
+        k_z, rad/m.
+    sensor
+        q in lattice steps (y, x).
+    evolution_s
+        Time t1 before the first sample.
+    """
 
     axis: int = 1
     axial: float = 0.0
     sensor: tuple[int, int] = (0, 0)
+    evolution_s: float = 0.0
 
 
 @dataclass(frozen=True, eq=False)
@@ -45,6 +58,8 @@ class Candidates:
         (kinds, lattice).
     seconds
         Duration of each shot, (kinds, lattice).
+    gain
+        Share of the signal's power that is left of each shot, (kinds, lattice).
     """
 
     grid: Grid
@@ -52,6 +67,7 @@ class Candidates:
     steps: IntArray
     allowed: NDArray[np.bool_]
     seconds: FloatArray
+    gain: FloatArray
 
     @classmethod
     def of(
@@ -60,8 +76,14 @@ class Candidates:
         instrument: Instrument,
         kinds: tuple[Kind, ...],
         limits: Limits | None = None,
+        loss: Loss | None = None,
     ) -> Candidates:
         """Every lattice point for every kind.
+
+        Parameters
+        ----------
+        loss
+            What diffusion takes; nothing if not given.
 
         Raises
         ------
@@ -75,21 +97,22 @@ class Candidates:
         rows, columns = (np.arange(-(n // 2), n - n // 2) for n in (ny, nx))
         steps = np.stack(np.meshgrid(rows, columns, indexing="ij"), axis=-1).reshape(-1, 2)
         step_y, step_x = grid.lattice_step
-        allowed, seconds = [], []
+        allowed, seconds, gain = [], [], []
         for kind in kinds:
             nuclear = np.empty((len(steps), 3))
             nuclear[:, 0], nuclear[:, 1] = steps[:, 1] * step_x, steps[:, 0] * step_y
             nuclear[:, 2] = kind.axial
             sensor = np.array([kind.sensor[1] * step_x, kind.sensor[0] * step_y])
             allowed.append(limits.allowed(instrument, nuclear, sensor))
-            seconds.append(limits.shot_time(instrument, nuclear))
+            seconds.append(limits.shot_time(instrument, nuclear, kind.evolution_s))
+            gain.append(np.ones(len(steps)) if loss is None else loss.power_left(nuclear))
         if not np.any(allowed):
             raise InputError(
                 "the gradients reach none of the candidates",
                 "candidates",
                 "allow longer pulses or a larger duty cycle, or use larger voxels",
             )
-        return cls(grid, kinds, steps, np.array(allowed), np.array(seconds))
+        return cls(grid, kinds, steps, np.array(allowed), np.array(seconds), np.array(gain))
 
     @property
     def count(self) -> int:
@@ -125,6 +148,7 @@ class Candidates:
             averages=averages,
             clock_time=np.concatenate([[0.0], np.cumsum(seconds)[:-1]]),
             sample_times=np.asarray(sample_times, float),
+            evolution_time=np.array([self.kinds[kind].evolution_s for kind, _ in unique]),
             spectral_axis=spectral_axis,
             reference_shift_ppm=reference_shift_ppm,
         )
@@ -134,13 +158,15 @@ def camera_kinds(
     axes: tuple[int, ...] = (1,),
     axial_rad_per_um: tuple[float, ...] = (0.0,),
     sensor_steps: tuple[tuple[int, int], ...] = ((0, 0),),
+    evolution_s: tuple[float, ...] = (0.0,),
 ) -> tuple[Kind, ...]:
     """All combinations."""
     return tuple(
-        Kind(axis, wave * 1e6, sensor)
+        Kind(axis, wave * 1e6, sensor, time)
         for axis in axes
         for wave in axial_rad_per_um
         for sensor in sensor_steps
+        for time in evolution_s
     )
 
 

@@ -1,4 +1,7 @@
-"""What the apparatus and the clock allow: which wavevectors, and how long a shot takes."""
+"""What the apparatus, the clock and diffusion allow.
+
+Which wavevectors, how long a shot takes, how much signal is left.
+"""
 
 from __future__ import annotations
 
@@ -9,7 +12,9 @@ from numpy.typing import NDArray
 
 from recon.errors import InputError
 from recon.instrument import Instrument
+from recon.physics.diffusion import pulse_attenuation
 from recon.physics.magnetisation import GYROMAGNETIC_RATIO
+from recon.protocol import Protocol, SpectralAxis
 
 FloatArray = NDArray[np.floating]
 
@@ -26,17 +31,31 @@ class Limits:
         Fastest change of the nuclear gradient.
     largest_duty_cycle
         Pulse time over shot time; the wires' heating is the user's own limit.
+    excitations
+        Excitations of one shot: 1 where one decay gives all samples, the number of samples on an
+        indirect spectral axis, where each needs an evolution of its own (see `excitations_of`).
+    pause_s
+        Time that each excitation costs besides, such as its share of polarising anew.
+    tick_s
+        Excitations begin at multiples of this time; 0 for any time.
     """
 
     base_duration_s: float = 1.0
     slew_T_per_m_s: float = 1e4  # noqa: N815
     largest_duty_cycle: float = 0.1
+    excitations: int = 1
+    pause_s: float = 0.0
+    tick_s: float = 0.0
 
     def __post_init__(self) -> None:
         if not (self.base_duration_s > 0 and self.slew_T_per_m_s > 0):
             raise InputError("base_duration_s and slew_T_per_m_s must be positive", "limits")
         if not 0 < self.largest_duty_cycle <= 1:
             raise InputError("largest_duty_cycle must lie between 0 and 1", "limits")
+        if self.excitations < 1 or not (self.pause_s >= 0 and self.tick_s >= 0):
+            raise InputError(
+                "excitations must be positive, pause_s and tick_s not negative", "limits"
+            )
 
     def pulse_time(self, instrument: Instrument, nuclear: FloatArray) -> FloatArray:
         """Shortest pulse that winds k (…, 3) along all axes at once, seconds.
@@ -51,9 +70,15 @@ class Limits:
         short = 2 * np.sqrt(area / self.slew_T_per_m_s)
         return np.where(area >= strength**2 / self.slew_T_per_m_s, full, short).max(axis=-1)
 
-    def shot_time(self, instrument: Instrument, nuclear: FloatArray) -> FloatArray:
-        """Duration of a shot, (…), seconds."""
-        return self.base_duration_s + self.pulse_time(instrument, nuclear)
+    def shot_time(
+        self, instrument: Instrument, nuclear: FloatArray, evolution: FloatArray | float = 0.0
+    ) -> FloatArray:
+        """Duration of a shot with all its excitations, (…), seconds."""
+        one = self.base_duration_s + self.pulse_time(instrument, nuclear) + evolution
+        one = one + self.pause_s
+        if self.tick_s > 0:
+            one = self.tick_s * np.ceil(one / self.tick_s - 1e-9)
+        return np.asarray(self.excitations * one)
 
     def allowed(
         self, instrument: Instrument, nuclear: FloatArray, sensor: FloatArray
@@ -65,3 +90,46 @@ class Limits:
         within &= (np.abs(sensor) <= instrument.sensor_wavevector_limit).all(axis=-1)
         within &= pulse <= longest * (1 + 1e-9)
         return within & (pulse <= self.largest_duty_cycle * (self.base_duration_s + pulse))
+
+
+def excitations_of(protocol: Protocol) -> int:
+    """Excitations that one average of a shot takes."""
+    indirect = protocol.spectral_axis is SpectralAxis.EVOLVE_THEN_ENCODE
+    return len(protocol.sample_times) if indirect else 1
+
+
+@dataclass(frozen=True, eq=False)
+class Loss:
+    """What diffusion leaves of a pattern wound to k.
+
+    exp(−D k² δ/3) of a pulse of length δ, and exp(−D k² t) at the times t at which the pattern is
+    listened to: a mean power over times and species, for the choice of shots. Source: Stejskal &
+    Tanner, J. Chem. Phys. 42:288 (1965).
+
+    Attributes
+    ----------
+    diffusion
+        D per species, m²/s.
+    t2_star
+        Per species, seconds.
+    listened
+        Times after the pulse, seconds; (0,) if the pattern is read at once.
+    """
+
+    instrument: Instrument
+    limits: Limits
+    diffusion: FloatArray
+    t2_star: FloatArray
+    listened: FloatArray
+
+    def power_left(self, nuclear: FloatArray) -> FloatArray:
+        """Share of the power for wavevectors k (shots, 3), (shots,)."""
+        pulse = self.limits.pulse_time(self.instrument, nuclear)
+        wave = np.linalg.norm(nuclear, axis=-1)
+        left = np.zeros(len(nuclear))
+        for diffusion, t2 in zip(self.diffusion, self.t2_star, strict=True):
+            plain = np.exp(-2 * self.listened / t2)
+            decay = np.exp(-2 * np.outer(diffusion * wave**2, self.listened))
+            during = pulse_attenuation(wave, float(diffusion), 1.0) ** (2 * pulse)
+            left += during * (decay @ plain) / plain.sum()
+        return left / len(self.diffusion)

@@ -1,0 +1,162 @@
+"""First-order falls of the criterion for every candidate at once.
+
+With B = Lᴴ M⁻¹ V M⁻¹ L of a candidate's evolution time, the fall is, to first order,
+
+    w Σ_κ' Σ_o h(κ')ᵀ B_o(κ') conj h(κ' + o),   h(κ') = f(κ' + k) F(κ'),
+
+o running over the frequencies that alias onto κ'. For all k at once that is a correlation of
+products of the kind's field f with B, one per unwrapped offset o; −o is the conjugate of o.
+"""
+
+from __future__ import annotations
+
+import numpy as np
+import scipy.fft
+from numpy.typing import NDArray
+
+from recon.planning.information import Information
+
+ComplexArray = NDArray[np.complexfloating]
+FloatArray = NDArray[np.floating]
+
+Offset = tuple[int, int]
+
+
+class Scores:
+    """Correlates; holds the spectra of the fields' products."""
+
+    def __init__(self, information: Information) -> None:
+        self.responses = information.responses
+        self.candidates = information.responses.candidates
+        nz, ny, nx = self.candidates.grid.shape
+        blocks, aliases = information.cosets.members.shape
+        self._aliases = aliases
+        self._alias = np.empty(ny * nx, int)
+        self._block = np.empty(ny * nx, int)
+        for flat in (information.cosets.opposite, information.cosets.members):
+            self._alias[flat] = np.arange(aliases)
+            self._block[flat] = np.arange(blocks)[:, None]
+        self._turned = np.ones(ny * nx, int)
+        self._turned[information.cosets.members] = 0
+        self._offsets = list(self._half_offsets())
+        self._products: list[ComplexArray] = []
+        if not self.responses.one_detector:
+            for field in self.responses.fields:
+                parts = [self._product(field, offset) for offset in self._offsets]
+                spectrum = scipy.fft.fft2(np.concatenate(parts), (2 * ny, 2 * nx), workers=2)
+                self._products.append(spectrum.astype(np.complex64))
+
+    def falls(self, information: Information) -> FloatArray:
+        """Approximate fall of the criterion for every candidate, (kinds, lattice)."""
+        slope = information.slope()
+        found = np.empty(self.candidates.allowed.shape)
+        kinds = self.candidates.kinds
+        spectra = information.spectra
+        places = np.array([spectra.place(kind.evolution_s) for kind in kinds])
+        for place in np.unique(places):
+            factor = spectra.factors[place]
+            seen = self._contracted(slope, factor)
+            rows = np.flatnonzero(places == place)
+            part = self._detector if self.responses.one_detector else self._camera
+            found[rows] = part(seen, self.responses.field_of_kind[rows])
+        scale = 0.5 * self.responses.weight * information.share * self.candidates.gain
+        return np.where(self.candidates.allowed, scale * found, -np.inf)
+
+    def _contracted(self, slope: ComplexArray, factor: ComplexArray) -> ComplexArray:
+        """Lᴴ B L and Lᴴ conj(B) L over modes, (2, blocks, aliases, nz, aliases, nz).
+
+        The second belongs to the mirror images of the blocks.
+        """
+        components, nz = factor.shape[1], self.candidates.grid.shape[0]
+        rest = slope.shape[-1] // components
+        split = slope.reshape(*slope.shape[:2], components, rest, components, rest)
+        gram = np.einsum("rcp,rdp->rcd", factor.conj(), factor)
+        small = [
+            np.einsum("rcd,rkcadb->kab", gram, split, optimize=True),
+            np.einsum("rcd,rkcadb->kab", gram, split.conj(), optimize=True),
+        ]
+        return np.stack(small).reshape(2, -1, self._aliases, nz, self._aliases, nz)
+
+    def _half_offsets(self) -> list[Offset]:
+        """Unwrapped offsets between frequencies that alias, one of each pair ±o."""
+        _, ny, nx = self.candidates.grid.shape
+        steps = [
+            np.arange(1 - count, count) * (size // count)
+            for count, size in zip(self.responses.aliases, (ny, nx), strict=True)
+        ]
+        every = [(int(y), int(x)) for y in steps[0] for x in steps[1]]
+        return [offset for offset in every if offset >= (0, 0)]
+
+    def _product(self, field: ComplexArray, offset: Offset) -> ComplexArray:
+        """f_z(κ_f) conj f_z'(κ_f + o), (pairs, ny, nx), where both lie in the band."""
+        nz, ny, nx = field.shape
+        moved = np.zeros_like(field)
+        (to_y, from_y), (to_x, from_x) = (
+            _overlap(o, n) for o, n in zip(offset, (ny, nx), strict=True)
+        )
+        moved[:, to_y, to_x] = field[:, from_y, from_x]
+        rows, columns, twice = _entries(nz, offset)
+        return (field[rows] * moved[columns].conj()) * twice[:, None, None]
+
+    def _camera(self, seen: ComplexArray, fields: NDArray[np.integer]) -> FloatArray:
+        _, ny, nx = self.candidates.grid.shape
+        parts = np.concatenate([self._weights(seen, offset) for offset in self._offsets])
+        # the correlation runs over −κ': conj FFT of the conjugate
+        spectrum = scipy.fft.fft2(parts.conj(), workers=2).conj()
+        rows = (self.candidates.steps[:, 0] + ny // 2 - ny) % (2 * ny)
+        columns = (self.candidates.steps[:, 1] + nx // 2 - nx) % (2 * nx)
+        falls = np.empty((len(fields), len(rows)))
+        for number, field in enumerate(fields):
+            total = np.einsum("pyx,pyx->yx", self._products[field], spectrum)
+            falls[number] = scipy.fft.ifft2(total, workers=2).real[rows, columns]
+        return falls
+
+    def _weights(self, seen: ComplexArray, offset: Offset) -> ComplexArray:
+        """F(κ') F(κ' + o) B_o(κ') over unwrapped frequencies, (pairs, 2 ny, 2 nx), complex64."""
+        nz, ny, nx = self.candidates.grid.shape
+        flat = np.arange(ny * nx).reshape(ny, nx)
+        other = np.roll(flat, (-offset[0], -offset[1]), axis=(0, 1)).ravel()
+        rows, columns, _ = _entries(nz, offset)
+        turned, block, alias, of_other = (
+            i[:, None] for i in (self._turned, self._block, self._alias, self._alias[other])
+        )
+        small = seen[turned, block, alias, rows, of_other, columns]
+        tall = np.tile(small.T.reshape(-1, ny, nx), (1, 2, 2)).astype(np.complex64)
+        moved = np.zeros_like(self.responses.footprint)
+        (to_y, from_y), (to_x, from_x) = (
+            _overlap(o, 2 * n) for o, n in zip(offset, (ny, nx), strict=True)
+        )
+        moved[to_y, to_x] = self.responses.footprint[from_y, from_x]
+        tall *= self.responses.footprint * moved
+        return tall
+
+    def _detector(self, seen: ComplexArray, fields: NDArray[np.integer]) -> FloatArray:
+        _, ny, nx = self.candidates.grid.shape
+        steps = self.candidates.steps
+        falls = np.empty((len(fields), len(steps)))
+        for number, place in enumerate(fields):
+            field = self.responses.fields[place]
+            row, column = (int(i[0]) for i in np.nonzero(np.abs(field).sum(axis=0)))
+            y = row - ny // 2 - steps[:, 0]
+            x = column - nx // 2 - steps[:, 1]
+            flat = (y % ny) * nx + x % nx
+            blocks = seen[self._turned[flat], self._block[flat], 0, :, 0]
+            h = field[:, row, column]
+            curved = np.einsum("a,kab,b->k", h, blocks, h.conj()).real
+            falls[number] = curved * self.responses.footprint[y + ny, x + nx] ** 2
+        return falls
+
+
+def _entries(nz: int, offset: Offset) -> tuple[NDArray[np.intp], NDArray[np.intp], FloatArray]:
+    """Rows and columns of the planes to correlate, and how often each counts."""
+    if offset == (0, 0):
+        rows, columns = np.triu_indices(nz)
+        return rows, columns, np.where(rows == columns, 1, 2).astype(np.float32)
+    rows, columns = (i.ravel() for i in np.indices((nz, nz)))
+    return rows, columns, np.full(len(rows), 2, np.float32)
+
+
+def _overlap(offset: int, size: int) -> tuple[slice, slice]:
+    """Where i and i + offset both lie in range(size)."""
+    low, high = max(0, -offset), size - max(0, offset)
+    return slice(low, high), slice(low + offset, high + offset)
