@@ -4,6 +4,7 @@ from __future__ import annotations
 
 import time
 from dataclasses import dataclass, field, replace
+from pathlib import Path
 
 import numpy as np
 
@@ -44,10 +45,13 @@ class Judge:
         self.scale = min(self.optimum, empty - self.optimum)
 
     @classmethod
-    def of(cls, problem: Problem, tolerance: float = 1e-6, limit: int = 3000) -> Judge:
-        """A long run in double precision."""
+    def of(cls, problem: Problem, keep: Path, tolerance: float = 1e-6, limit: int = 3000) -> Judge:
+        """A long run in double precision, made once and kept in a file."""
         double = in_double(problem)
+        if keep.exists():
+            return cls(double, np.load(keep))
         solution = solve(double, ADMM(balance_until=200), Stopping(tolerance, limit=limit))
+        np.save(keep, solution.x)
         return cls(double, solution.x)
 
     def gap(self, x: np.ndarray) -> float:

@@ -18,6 +18,7 @@ import argparse
 import json
 import time
 from collections.abc import Iterable
+from pathlib import Path
 from typing import Any
 
 import numpy as np
@@ -29,6 +30,7 @@ from solver_cases import CASES, RECORDS, Case
 from recon.solvers import ADMM, Problem, Stopping, solve
 
 BUDGET = 60.0
+MOST = 2000
 
 
 def ours(case: Case, judge: Judge, repeats: int) -> dict[str, Any]:
@@ -39,11 +41,13 @@ def ours(case: Case, judge: Judge, repeats: int) -> dict[str, Any]:
     trace = Trace(judge, np.inf)
     state = method.start(problem, None)
     try:
-        while True:
+        while len(trace.gaps) < MOST:
             state = method.advance(problem, state)
             trace.look(method.estimate(problem, state))
+        print(f"    ours did not reach the goal: gap {trace.gaps[-1]:.2g}")
     except Reached:
-        count = len(trace.gaps)
+        pass
+    count = len(trace.gaps)
 
     def chain() -> np.ndarray:
         return solve(case.problem(samples), method, Stopping(0.0, limit=count)).x
@@ -66,7 +70,7 @@ def peers(runs: Iterable[Any], judge: Judge, budget: float) -> list[dict[str, An
             run(trace)
         except Reached:
             outcome = "reached"
-            budget = min(budget, 1.5 * trace.seconds[-1])
+            budget = min(budget, 1.2 * trace.seconds[-1])
         except OutOfTime:
             outcome = "stopped"
         print(
@@ -90,7 +94,9 @@ def run_case(case: Case, repeats: int) -> dict[str, Any]:
     problem = case.problem(case.samples)
     begin = time.perf_counter()
     exact = case.dead is None
-    judge = Judge.of(problem) if exact else Judge.of(problem, 1e-5, 150)
+    assert isinstance(case.record.source, Path)
+    keep = case.record.source.with_suffix(f".{case.weight:g}.npy")
+    judge = Judge.of(problem, keep) if exact else Judge.of(problem, keep, 1e-5, 150)
     print(
         f"reference optimum {judge.optimum:.8g} in {time.perf_counter() - begin:.0f} s, "
         f"optimality conditions met to {judge.optimality():.1g} λ"
@@ -107,7 +113,7 @@ def run_case(case: Case, repeats: int) -> dict[str, Any]:
 
     common = (pieces, part.term, threshold, problem.quadratic.largest)
     found = peers(peers_sigpy.runs(*common), judge, BUDGET)
-    budget = min([BUDGET, *(1.5 * one["seconds"] for one in found if one["outcome"] == "reached")])
+    budget = min([BUDGET, *(1.2 * one["seconds"] for one in found if one["outcome"] == "reached")])
     found += peers(peers_pylops.runs(*common), judge, budget)
     helped = peers(peers_sigpy.runs_with_blocks(*common), judge, BUDGET) if exact else []
     return report(case, mine, found, helped, unit, judge)
