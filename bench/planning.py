@@ -23,7 +23,6 @@ from recon.grid import Grid
 from recon.planning.bound import Bound, Expectation, Experiment
 from recon.planning.candidates import Candidates, camera_kinds
 from recon.planning.choice import Budget, Choice, WorstError, information_of
-from recon.planning.information import Scores
 from recon.planning.relaxed import lower_bound
 from recon.planning.tables import UniformRandom, VariableDensity
 from recon.priors import NonNegative, TotalVariation
@@ -111,11 +110,7 @@ def exhaustive() -> float:
     information = information_of(experiment, candidates, times)
 
     def value(pairs) -> float:
-        information.normal[:] = 0
-        for pair in pairs:
-            touched, vectors = information.vectors(information.responses.at(candidates, pair))
-            information.normal[touched] += vectors @ vectors.conj().transpose(0, 2, 1)
-        information.refresh()
+        information.set_table(list(pairs))
         return information.criterion()
 
     options = [(0, int(place)) for place in keep]
@@ -178,12 +173,7 @@ def main() -> None:
     table(rows, ["128 random shots", "mean error / spread", "chosen shots needed ÷ 128"])
     print(f"chosen, 128 shots: mean error / spread {at_128:.4f}")
     ratio = monte_carlo(experiment, candidates.protocol(chosen.pairs[:64], TIMES))
-    information = information_of(experiment, candidates, TIMES)
-    for pair in chosen.pairs[:128]:
-        information.add(information.responses.at(candidates, pair))
-    relaxed = lower_bound(
-        information, Scores(candidates, information.responses), candidates, chosen.pairs[:128], 30
-    )
+    relaxed = lower_bound(information_of(experiment, candidates, TIMES), chosen.pairs[:128], 30)
     small = exhaustive()
     print(f"greedy above the relaxed lower bound by at most {100 * relaxed.gap:.2f} % (128 shots)")
     print(f"greedy with exchange over the best of all 4-shot tables: {small:.4f}")

@@ -22,6 +22,7 @@ from recon.basis import species_basis
 from recon.errors import InputError
 from recon.forward import BlockQuadratic, ForwardModel, ForwardOperator, Statistics
 from recon.forward.block_matrix import BlockMatrix
+from recon.forward.grouped import GroupedStatistics, data_term
 from recon.forward.normal import normal_blocks
 from recon.grid import Grid
 from recon.instrument import Instrument
@@ -115,13 +116,28 @@ class Bound:
         cls, experiment: Experiment, protocol: Protocol, basis: ComplexArray | None = None
     ) -> Bound:
         """Gather the blocks of a table of shots; `basis` replaces the species' own decays."""
-        model = experiment.model(protocol, basis)
-        layout, normal = normal_blocks(ForwardOperator(model))
-        gram = model.basis.conj().T @ model.basis
-        empty = np.zeros((len(gram), *model.grid.shape), np.complex64)
-        statistics = Statistics(model.grid, layout, empty, normal, gram, 0.0, 1)
         unit = np.asarray(experiment.expectation.spread_mM, float)
-        return cls(experiment, BlockQuadratic(statistics.scaled(unit), real=True))
+        evolutions, group = protocol.evolutions
+        empty = np.zeros((len(unit), *experiment.grid.shape), np.complex64)
+        normals, grams = [], []
+        for place, evolution in enumerate(evolutions):
+            shots = protocol.subset(group == place)
+            phi = basis
+            if phi is None:
+                phi = species_basis(
+                    experiment.species, experiment.instrument, protocol, float(evolution)
+                )
+            layout, normal = normal_blocks(ForwardOperator(experiment.model(shots, phi)))
+            normals.append(normal)
+            grams.append(phi.conj().T @ phi)
+        statistics: Statistics | GroupedStatistics
+        if len(normals) == 1:
+            statistics = Statistics(experiment.grid, layout, empty, normals[0], grams[0], 0.0, 1)
+        else:
+            statistics = GroupedStatistics(
+                experiment.grid, layout, empty, tuple(normals), tuple(grams), 0.0, 1
+            )
+        return cls(experiment, data_term(statistics.scaled(unit), real=True))
 
     @property
     def unit(self) -> FloatArray:

@@ -14,12 +14,14 @@ from typing import Protocol as Interface
 import numpy as np
 from numpy.typing import NDArray
 
-from recon.basis import species_basis
 from recon.errors import InputError
 from recon.planning.bound import Experiment
 from recon.planning.candidates import Candidates
-from recon.planning.information import Information, Pair, Responses, Scores
-from recon.protocol import Protocol
+from recon.planning.information import Information
+from recon.planning.responses import Pair, Responses
+from recon.planning.scores import Scores
+from recon.planning.spectra import Spectra
+from recon.protocol import Protocol, SpectralAxis
 
 FloatArray = NDArray[np.floating]
 Progress = Callable[[int, int], None]
@@ -30,8 +32,11 @@ REFRESH = 32
 class Criterion(Interface):
     """What is to be small."""
 
-    def weights(self, information: Information) -> FloatArray:
-        """Weights of the depths for the next step, (nz,), mean 1."""
+    def weights(self, variance: FloatArray) -> FloatArray:
+        """Weights of the depths for the next step, (nz,), mean 1, given their variances."""
+
+    def value(self, variance: FloatArray) -> float:
+        """What the variances per depth amount to."""
 
 
 @dataclass(frozen=True)
@@ -44,12 +49,20 @@ class MeanError:
 
     depth_weights: tuple[float, ...] = ()
 
-    def weights(self, information: Information) -> FloatArray:
-        nz = information.shape[0]
+    @classmethod
+    def of_region(cls, region: NDArray[np.bool_]) -> MeanError:
+        """Weights by the number of voxels that a mask (nz, ny, nx) has in each plane."""
+        return cls(tuple(float(count) for count in region.sum(axis=(1, 2))))
+
+    def weights(self, variance: FloatArray) -> FloatArray:
+        nz = len(variance)
         weights = np.asarray(self.depth_weights or (1.0,) * nz, float)
         if weights.shape != (nz,) or not weights.min() >= 0 or not weights.sum() > 0:
             raise InputError(f"depth_weights needs {nz} numbers, not all 0", "criterion")
         return weights / weights.mean()
+
+    def value(self, variance: FloatArray) -> float:
+        return float((self.weights(variance) * variance).mean())
 
 
 @dataclass(frozen=True)
@@ -58,10 +71,13 @@ class WorstError:
 
     power: float = 6.0
 
-    def weights(self, information: Information) -> FloatArray:
-        variance = information.depth_variance()
+    def weights(self, variance: FloatArray) -> FloatArray:
         weights = (variance / variance.max()) ** (self.power - 1)
         return weights / weights.mean()
+
+    def value(self, variance: FloatArray) -> float:
+        top = float(variance.max())
+        return top * float(((variance / top) ** self.power).mean()) ** (1 / self.power)
 
 
 @dataclass(frozen=True)
@@ -76,9 +92,14 @@ class Budget:
             raise InputError("state shots or seconds", "budget")
 
     def left(self, chosen: int, spent: float, longest: float) -> bool:
-        """Room for another shot."""
+        """Room for another shot of the shortest duration."""
         within = self.shots is None or chosen < self.shots
-        return within and (self.seconds is None or spent + longest <= self.seconds)
+        return within and spent + longest <= self.most
+
+    @property
+    def most(self) -> float:
+        """Seconds there are."""
+        return np.inf if self.seconds is None else self.seconds * (1 + 1e-9)
 
 
 @dataclass(frozen=True)
@@ -109,6 +130,7 @@ class Choice:
         sample_times: FloatArray,
         budget: Budget,
         progress: Progress | None = None,
+        spectral_axis: SpectralAxis = SpectralAxis.EVOLVE_THEN_ENCODE,
     ) -> Chosen:
         """Fill the budget.
 
@@ -121,8 +143,8 @@ class Choice:
         search.greedy(budget, progress)
         if not search.pairs:
             raise InputError("the budget has no room for one shot", "budget", "give more time")
-        search.exchange()
-        return search.result()
+        search.exchange(budget)
+        return search.result(spectral_axis)
 
 
 @dataclass(frozen=True, eq=False)
@@ -137,6 +159,8 @@ class Chosen:
         The table.
     course
         Criterion after each shot of the greedy pass.
+    value
+        Criterion after the exchanges.
     exchanged
         Number of exchanges made.
     """
@@ -144,19 +168,8 @@ class Chosen:
     pairs: list[Pair]
     protocol: Protocol
     course: list[float]
+    value: float
     exchanged: int
-
-
-def spectral_modes(experiment: Experiment, sample_times: FloatArray) -> FloatArray:
-    """Eigenvalues of the real part of Φᴴ Φ for units of the expected spread, (species,).
-
-    The imaginary part couples species through the odd part of G; the choice leaves it out, the
-    bound does not.
-    """
-    times = Protocol.plain(np.zeros((1, 3)), np.zeros((1, 2)), 1, sample_times)
-    basis = species_basis(experiment.species, experiment.instrument, times)
-    basis = basis * np.asarray(experiment.expectation.spread_mM)
-    return np.maximum(np.linalg.eigvalsh((basis.conj().T @ basis).real), 0)
 
 
 def information_of(
@@ -166,11 +179,11 @@ def information_of(
     responses: Responses | None = None,
 ) -> Information:
     """No shot yet: the prior alone."""
-    nz = experiment.grid.shape[0]
     prior = 0.5 / experiment.expectation.spectrum(experiment.grid)
-    modes = spectral_modes(experiment, sample_times)
+    evolutions = np.unique([kind.evolution_s for kind in candidates.kinds])
+    spectra = Spectra.of(experiment, np.asarray(sample_times, float), evolutions)
     responses = responses or Responses.of(experiment, candidates)
-    return Information(responses, modes, prior, np.ones(nz))
+    return Information(responses, spectra, prior)
 
 
 class _Search:
@@ -185,65 +198,78 @@ class _Search:
     ) -> None:
         self.settings, self.candidates, self.times = settings, candidates, sample_times
         self.information = information_of(experiment, candidates, sample_times)
-        self.scores = Scores(candidates, self.information.responses)
+        self.scores = Scores(self.information)
         random = np.random.default_rng(settings.seed)
         self.tie = 1 + 1e-9 * random.random(candidates.allowed.shape)
+        self.shortest = float(candidates.seconds[candidates.allowed].min())
         self.pairs: list[Pair] = []
         self.course: list[float] = []
+        self.spent = 0.0
         self.exchanged = 0
 
     def greedy(self, budget: Budget, progress: Progress | None) -> None:
-        spent, longest = 0.0, float(self.candidates.seconds[self.candidates.allowed].max())
-        while budget.left(len(self.pairs), spent, longest):
-            pair, _ = self.best()
-            self.take(pair)
-            spent += float(self.candidates.seconds[pair])
-            self.course.append(self.information.criterion())
-            if progress is not None and budget.shots is not None:
-                progress(len(self.pairs), budget.shots)
+        while budget.left(len(self.pairs), self.spent, self.shortest):
+            self.put(self.best(budget.most - self.spent))
+            self.course.append(self.value())
+            if progress is not None:
+                share = self.spent / budget.most
+                if budget.shots is not None:
+                    share = max(share, len(self.pairs) / budget.shots)
+                progress(len(self.pairs), max(round(len(self.pairs) / share), len(self.pairs)))
 
-    def best(self) -> tuple[Pair, float]:
-        """The candidate with the largest exact fall per second among the shortlist."""
-        self.information.depth_weights = self.settings.criterion.weights(self.information)
+    def value(self) -> float:
+        """The criterion."""
+        return self.settings.criterion.value(self.information.depth_variance())
+
+    def best(self, room: float) -> Pair:
+        """Of the candidates that fit, the one with the largest fall per second."""
+        variance = self.information.depth_variance()
+        self.information.depth_weights = self.settings.criterion.weights(variance)
         rates = self.scores.falls(self.information) / self.candidates.seconds * self.tie
+        if np.isfinite(room):
+            rates[self.candidates.seconds > room] = -np.inf
         flat = rates.ravel()
-        few = min(self.settings.shortlist, int(self.candidates.count))
+        few = min(self.settings.shortlist, int(np.isfinite(flat).sum()))
         top = np.argpartition(flat, -few)[-few:]
         found = []
         for index in top:
             pair = (int(index // rates.shape[1]), int(index % rates.shape[1]))
-            fall = self.information.fall(self._response(pair))
-            found.append((fall / self.candidates.seconds[pair], pair, fall))
-        _, pair, fall = max(found)
-        return pair, fall
+            fall = self.information.fall(pair)
+            found.append((fall / self.candidates.seconds[pair], pair))
+        return max(found)[1]
 
-    def take(self, pair: Pair) -> None:
-        self.information.add(self._response(pair))
+    def put(self, pair: Pair) -> None:
+        """Add a shot."""
+        self.information.add(pair)
         self.pairs.append(pair)
+        self.spent += float(self.candidates.seconds[pair])
         if len(self.pairs) % REFRESH == 0:
             self.information.refresh()
 
-    def exchange(self) -> None:
+    def take(self, place: int) -> Pair:
+        """Remove a shot."""
+        pair = self.pairs.pop(place)
+        self.information.add(pair, -1.0)
+        self.spent -= float(self.candidates.seconds[pair])
+        return pair
+
+    def exchange(self, budget: Budget) -> None:
         """Swap the least useful shot for the best other one while the criterion falls."""
         for _ in range(self.settings.exchanges):
-            losses = [-self.information.fall(self._response(pair), -1.0) for pair in self.pairs]
-            place = int(np.argmin(losses))
-            pair = self.pairs[place]
-            before = self.information.criterion()
-            self.information.add(self._response(pair), -1.0)
-            other, _ = self.best()
-            self.information.add(self._response(other))
-            if self.information.criterion() >= before * (1 - 1e-9) or other == pair:
-                self.information.add(self._response(other), -1.0)
-                self.information.add(self._response(pair))
+            losses = {pair: -self.information.fall(pair, -1.0) for pair in set(self.pairs)}
+            rates = [losses[pair] / self.candidates.seconds[pair] for pair in self.pairs]
+            place = int(np.argmin(rates))
+            before = self.value()
+            old = self.take(place)
+            self.put(self.best(budget.most - self.spent))
+            if self.value() >= before * (1 - 1e-9):
+                self.take(len(self.pairs) - 1)
+                self.put(old)
+                self.pairs.insert(place, self.pairs.pop())
                 break
-            self.pairs[place] = other
             self.exchanged += 1
         self.information.refresh()
 
-    def result(self) -> Chosen:
-        protocol = self.candidates.protocol(self.pairs, self.times)
-        return Chosen(self.pairs, protocol, self.course, self.exchanged)
-
-    def _response(self, pair: Pair) -> NDArray[np.complexfloating]:
-        return self.information.responses.at(self.candidates, pair)
+    def result(self, spectral_axis: SpectralAxis) -> Chosen:
+        protocol = self.candidates.protocol(self.pairs, self.times, spectral_axis=spectral_axis)
+        return Chosen(self.pairs, protocol, self.course, self.value(), self.exchanged)

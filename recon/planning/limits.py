@@ -12,7 +12,6 @@ from numpy.typing import NDArray
 
 from recon.errors import InputError
 from recon.instrument import Instrument
-from recon.physics.diffusion import pulse_attenuation
 from recon.physics.magnetisation import GYROMAGNETIC_RATIO
 from recon.protocol import Protocol, SpectralAxis
 
@@ -130,6 +129,6 @@ class Loss:
         for diffusion, t2 in zip(self.diffusion, self.t2_star, strict=True):
             plain = np.exp(-2 * self.listened / t2)
             decay = np.exp(-2 * np.outer(diffusion * wave**2, self.listened))
-            during = pulse_attenuation(wave, float(diffusion), 1.0) ** (2 * pulse)
+            during = np.exp(-2 * diffusion * wave**2 * pulse / 3)
             left += during * (decay @ plain) / plain.sum()
         return left / len(self.diffusion)

@@ -14,8 +14,9 @@ from dataclasses import dataclass
 
 import numpy as np
 
-from recon.planning.candidates import Candidates
-from recon.planning.information import Information, Pair, Scores
+from recon.planning.information import Information
+from recon.planning.responses import Pair
+from recon.planning.scores import Scores
 
 
 @dataclass(frozen=True)
@@ -32,19 +33,15 @@ class Relaxation:
         return self.table / self.lower_bound - 1
 
 
-def lower_bound(
-    information: Information,
-    scores: Scores,
-    candidates: Candidates,
-    pairs: list[Pair],
-    steps: int = 40,
-) -> Relaxation:
-    """Start from a table whose shots are already in `information`, and move away from it.
+def lower_bound(information: Information, pairs: list[Pair], steps: int = 40) -> Relaxation:
+    """Start from a table of shots, and move away from it.
 
     `information` is changed: it ends at the relaxed design.
     """
+    scores, allowed = Scores(information), information.responses.candidates.allowed
+    information.set_table(pairs)
     total = float(len(pairs))
-    weights = np.zeros(candidates.allowed.shape)
+    weights = np.zeros(allowed.shape)
     np.add.at(weights, tuple(np.array(pairs).T), 1.0)
     table = information.criterion()
     best = -np.inf
@@ -52,34 +49,34 @@ def lower_bound(
     for step in range(1, steps + 1):
         done = step
         slopes = scores.falls(information)
-        reached = np.where(candidates.allowed, slopes, 0)
+        reached = np.where(allowed, slopes, 0)
         value = information.criterion()
         used = float((weights * reached).sum())
         best = max(best, value - (total * float(reached.max()) - used))
         place = np.unravel_index(int(np.argmax(slopes)), slopes.shape)
         target = np.zeros_like(weights)
         target[place] = total
-        share = _move(information, (int(place[0]), int(place[1])), candidates, total)
+        share = _move(information, (int(place[0]), int(place[1])), total)
         weights = (1 - share) * weights + share * target
         if value - best < 1e-3 * value:
             break
     return Relaxation(table, best, done)
 
 
-def _move(information: Information, pair: Pair, candidates: Candidates, total: float) -> float:
+def _move(information: Information, pair: Pair, total: float) -> float:
     """Move the best share of all weight to one candidate, by trying halves; returns the share."""
-    touched, vectors = information.vectors(information.responses.at(candidates, pair))
-    whole = np.zeros_like(information.normal)
-    whole[touched] = total * (vectors @ vectors.conj().transpose(0, 2, 1))
-    start, best, chosen = information.normal, information.criterion(), 0.0
+    touched, vectors = information.vectors(pair)
+    whole = np.zeros_like(information.data)
+    whole[:, touched] = total * (vectors @ vectors.conj().swapaxes(-1, -2))
+    start, best, chosen = information.data, information.criterion(), 0.0
     for share in 0.5 ** np.arange(2, 12):
-        information.normal = (1 - share) * start + share * whole
+        information.data = (1 - share) * start + share * whole
         information.refresh()
         value = information.criterion()
         if value < best:
             best, chosen = value, float(share)
         elif chosen:
             break
-    information.normal = (1 - chosen) * start + chosen * whole
+    information.data = (1 - chosen) * start + chosen * whole
     information.refresh()
     return chosen
