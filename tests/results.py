@@ -46,11 +46,13 @@ def cube(on: Grid | None = None, times: int = 64) -> Cube:
     amount = np.arange(1, on.shape[2] + 1) * np.ones(on.shape)
     values = (line[:, None, None, None] * amount).astype(np.complex64)
     error = np.full(values.shape, 0.1, np.float32)
+    resolution = 1e-6 * np.random.default_rng(3).random((times, on.shape[0], 3))
     return Cube(
         on,
         values,
         account(),
         error,
+        resolution,
         sample_times=t,
         larmor_frequency=LARMOR,
         reference_shift_ppm=REFERENCE,

@@ -56,20 +56,30 @@ def page(content, tmp_path_factory) -> Path:
     return write_page(tmp_path_factory.mktemp("page") / "page.html", content)
 
 
-@pytest.fixture
-def browser(page, tmp_path):
-    driver, chromium = shutil.which("chromedriver"), shutil.which("chromium")
-    if driver is None or chromium is None:
+@pytest.fixture(scope="module")
+def chromium(tmp_path_factory):
+    driver, program = shutil.which("chromedriver"), shutil.which("chromium")
+    if driver is None or program is None:
         pytest.skip("no browser: install Debian's chromium and chromium-driver")
     options = webdriver.ChromeOptions()
-    options.binary_location = chromium
-    for flag in (*FLAGS, f"--user-data-dir={tmp_path / 'profile'}", "--window-size=1400,1000"):
+    options.binary_location = program
+    profile = tmp_path_factory.mktemp("profile")
+    for flag in (*FLAGS, f"--user-data-dir={profile}", "--window-size=1400,1000"):
         options.add_argument(flag)
-    service = webdriver.ChromeService(executable_path=driver)
-    open_browser = webdriver.Chrome(options=options, service=service)
-    open_browser.get(page.as_uri())
-    yield open_browser
-    open_browser.quit()
+    running = webdriver.Chrome(
+        options=options, service=webdriver.ChromeService(executable_path=driver)
+    )
+    yield running
+    running.quit()
+
+
+@pytest.fixture
+def browser(chromium, page):
+    """The page as it opens, on a screen 1400 pixels wide."""
+    chromium.execute_cdp_cmd("Emulation.clearDeviceMetricsOverride", {})
+    chromium.execute_cdp_cmd("Emulation.setEmulatedMedia", {"media": ""})
+    chromium.get(page.as_uri())
+    return chromium
 
 
 def shown(browser, place: int) -> tuple[float, float]:

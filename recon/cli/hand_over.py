@@ -21,6 +21,13 @@ from recon.result import Cube, SpeciesMaps, load_result
 @click.option("-o", "--output", type=click.Path(path_type=Path), default=Path("dataset"))
 @click.option("--subject", default="01", show_default=True, help="Letters and digits.")
 @click.option(
+    "--participant",
+    "participant",
+    multiple=True,
+    metavar="COLUMN=VALUE",
+    help="Of participants.tsv, which is written only if given; repeatable.",
+)
+@click.option(
     "--placement",
     type=click.Path(path_type=Path),
     default=None,
@@ -33,6 +40,7 @@ def verb(
     results: tuple[Path, ...],
     output: Path,
     subject: str,
+    participant: tuple[str, ...],
     placement: Path | None,
     micrograph: Path | None,
     pixel_um: float | None,
@@ -56,13 +64,30 @@ def verb(
         maps=maps,
         cube=cube,
         placement=INSTRUMENT if placement is None else read_placement(placement),
-        subject=Subject(subject),
+        subject=Subject(subject, columns(participant)),
         micrograph=None if micrograph is None else on_grid(micrograph, grid, pixel_um),
     )
     written = delivery.write(output, replace=replace)
     click.echo(f"{output}: {len(written)} files")
     for path in written:
         click.echo(f"    {path}")
+
+
+def columns(pairs: tuple[str, ...]) -> dict[str, str]:
+    """COLUMN=VALUE pairs as a row of participants.tsv.
+
+    Raises
+    ------
+    InputError
+        A pair without `=`, or with a tab or a line break.
+    """
+    row = {}
+    for pair in pairs:
+        name, sign, value = pair.partition("=")
+        if not (name and sign and value) or any(one in pair for one in "\t\r\n"):
+            raise InputError(f"'{pair}' is no COLUMN=VALUE", "--participant")
+        row[name] = value
+    return row
 
 
 def read_placement(path: Path) -> Placement:

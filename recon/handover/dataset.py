@@ -22,7 +22,7 @@ import json
 import re
 import shutil
 import tempfile
-from collections.abc import Iterator, Mapping
+from collections.abc import Iterator, Mapping, Sequence
 from contextlib import contextmanager
 from dataclasses import dataclass, field
 from pathlib import Path
@@ -33,16 +33,20 @@ from numpy.typing import NDArray
 
 from recon.errors import InputError
 from recon.files import write_failure
+from recon.grid import Grid
 from recon.handover import nifti
-from recon.handover.labels import MEANING, readability
+from recon.handover.labels import Labels
 from recon.handover.placement import INSTRUMENT, Placement
 from recon.handover.spectroscopy import write_time_cube
 from recon.result import Account, Cube, Result, SpeciesMaps
 from recon.specimen import GridDescription
 
 BIDS_VERSION = "1.10.0"
+WIDTHS = "PointWidth_m"
 CAUTION = "Research use only, not for diagnosis."
 AXES = ("Z", "Y", "X")
+OF_A_SPECIES = ("", "Error", "Labels", *(f"Width{axis}" for axis in AXES))
+OF_THE_DATASET = ("spectrum", "cubeError", "micrograph")
 
 
 @dataclass(frozen=True)
@@ -73,6 +77,8 @@ class Delivery:
         An image already on the grid, (nz, ny, nx), or None.
     name
         Of the dataset.
+    labels
+        Which voxels can be read; by default from the limits of detection and quantification.
     """
 
     maps: SpeciesMaps | None = None
@@ -81,12 +87,26 @@ class Delivery:
     subject: Subject = field(default_factory=Subject)
     micrograph: NDArray[Any] | None = None
     name: str = "near-field spectroscopic imaging"
+    labels: Labels | None = None
 
     def __post_init__(self) -> None:
         if self.maps is None and self.cube is None:
             raise InputError("neither maps nor cube to hand over", "dataset")
         if self.maps is not None and self.cube is not None and self.maps.grid != self.cube.grid:
             raise InputError("maps and cube lie on different grids", "dataset")
+        if self.maps is not None:
+            _check_keys(self.maps.names)
+        shape = None if self.maps is None else self.maps.values.shape
+        if self.labels is not None and self.labels.values.shape != shape:
+            raise InputError(f"labels of shape {self.labels.values.shape}, not {shape}", "dataset")
+        self.placement.check_precision(self.grid)
+
+    @property
+    def grid(self) -> Grid:
+        """The common grid."""
+        result = self.maps if self.maps is not None else self.cube
+        assert result is not None
+        return result.grid
 
     def write(self, folder: Path | str, *, replace: bool = False) -> list[Path]:
         """Write the dataset; the files, relative to `folder`.
@@ -119,11 +139,10 @@ class _Writer:
         if self.delivery.maps is not None:
             self._maps(self.delivery.maps)
         if self.delivery.micrograph is not None:
-            grid = (self.delivery.maps or self.delivery.cube).grid  # type: ignore[union-attr]
             nifti.write_map(
                 self._derived("micrograph"),
                 self.delivery.micrograph,
-                grid,
+                self.delivery.grid,
                 "micrograph",
                 "image level",
                 {"Description": "An accompanying image resampled onto the grid by area."},
@@ -179,14 +198,17 @@ class _Writer:
             )
 
     def _maps(self, maps: SpeciesMaps) -> None:
-        labels = readability(maps)
+        labels = self.delivery.labels or Labels.derived(maps)
         for place, name in enumerate(maps.names):
             key = entity(name)
-            self._map(key, maps.values[place], maps, name, "mM", {"Species": name, "Order": place})
+            facts: dict[str, Any] = {"Species": name, "Order": place}
+            if maps.resolution is not None:
+                facts[WIDTHS] = _plain(maps.resolution[place].tolist())
+            self._map(key, maps.values[place], maps, name, "mM", facts)
             if maps.standard_error is not None:
                 error = maps.standard_error[place]
                 self._map(f"{key}Error", error, maps, f"{name} standard error", "mM")
-            self._labels(f"{key}Labels", labels[place], maps, name)
+            self._labels(f"{key}Labels", labels.values[place], labels.meaning, name)
             if maps.resolution is not None:
                 for axis, widths in zip(AXES, maps.resolution[place].T, strict=True):
                     spread = np.broadcast_to(widths[:, None, None] * 1e6, maps.grid.shape)
@@ -206,11 +228,13 @@ class _Writer:
         facts = _facts(result, placement) | dict(more or {})
         nifti.write_map(self._derived(key), values, result.grid, title, unit, facts, placement)
 
-    def _labels(self, key: str, labels: NDArray[Any], maps: SpeciesMaps, name: str) -> None:
-        path = self._derived(key)
-        nifti.write_mask(path, labels, maps.grid, name, self.delivery.placement)
-        meaning = {str(int(label)): text for label, text in MEANING.items()}
-        facts = {"Species": name, "Labels": meaning, "Caution": CAUTION}
+    def _labels(
+        self, key: str, values: NDArray[Any], meaning: Mapping[int, str], name: str
+    ) -> None:
+        path, grid = self._derived(key), self.delivery.grid
+        nifti.write_mask(path, values, grid, name, self.delivery.placement)
+        numbers = {str(label): text for label, text in meaning.items()}
+        facts = {"Species": name, "Labels": numbers, "Caution": CAUTION}
         _write_json(path.with_name(path.name.removesuffix(".nii.gz") + ".json"), facts)
 
     def _derived(self, key: str) -> Path:
@@ -235,21 +259,52 @@ def _facts(result: Result, placement: Placement) -> dict[str, Any]:
     """What every sidecar of a result tells of it."""
     account: Account = result.account
     description = GridDescription.of(result.grid)
-    return {
+    facts = {
         "Grid": json.loads(description.to_json()),
         "Frame": placement.frame,
         "Prior": account.prior,
         "PriorWeights": dict(account.weights),
         "WhyStopped": account.why_stopped,
-        "Misfit": account.misfit if np.isfinite(account.misfit) else "not computed",
+        "Misfit": account.misfit,
         "Provenance": dict(account.provenance),
         "Remarks": list(account.remarks),
         "Caution": CAUTION,
     }
+    return dict(_plain(facts))
 
 
 def _cube_facts(cube: Cube) -> dict[str, Any]:
-    return {"SampleTimes_s": np.asarray(cube.sample_times, float).tolist()}
+    facts = {
+        "SampleTimes_s": np.asarray(cube.sample_times, float).tolist(),
+        "LarmorFrequency_Hz": cube.larmor_frequency,
+    }
+    if cube.resolution is not None:
+        facts[WIDTHS] = _plain(cube.resolution.tolist())
+    return facts
+
+
+def _plain(value: Any) -> Any:
+    """The same with numbers that JSON does not know written as text ("nan", "inf")."""
+    if isinstance(value, Mapping):
+        return {key: _plain(one) for key, one in value.items()}
+    if isinstance(value, (list, tuple)):
+        return [_plain(one) for one in value]
+    return str(value) if isinstance(value, float) and not np.isfinite(value) else value
+
+
+def _check_keys(names: Sequence[str]) -> None:
+    """Refuse names that would write one file twice, also where case does not count."""
+    taken = {key.casefold(): "a file of the dataset" for key in OF_THE_DATASET}
+    for name in names:
+        for ending in OF_A_SPECIES:
+            key = (entity(name) + ending).casefold()
+            if key in taken:
+                raise InputError(
+                    f"species '{name}' shares a file name with {taken[key]}",
+                    "dataset",
+                    "rename the species",
+                )
+            taken[key] = f"'{name}'"
 
 
 def _readme(delivery: Delivery) -> str:

@@ -2,11 +2,14 @@
 
 from __future__ import annotations
 
+from collections.abc import Mapping
+from dataclasses import dataclass
 from enum import IntEnum
 
 import numpy as np
 from numpy.typing import NDArray
 
+from recon.errors import InputError
 from recon.result import SpeciesMaps
 
 DETECTION = 3.3
@@ -32,6 +35,32 @@ MEANING = {
     Readability.BELOW_DETECTION: "amount within 3.3 standard errors of zero: not readable",
     Readability.NOT_FINITE: "no value",
 }
+
+
+@dataclass(frozen=True, eq=False)
+class Labels:
+    """A verdict on every voxel of every map, and what each number means.
+
+    Attributes
+    ----------
+    values
+        (species, nz, ny, nx), whole numbers 0 to 255.
+    meaning
+        A sentence for every number that occurs.
+    """
+
+    values: NDArray[np.uint8]
+    meaning: Mapping[int, str]
+
+    def __post_init__(self) -> None:
+        unknown = set(np.unique(self.values).tolist()) - set(self.meaning)
+        if unknown:
+            raise InputError(f"label {min(unknown)} has no meaning", "labels", "give one sentence")
+
+    @classmethod
+    def derived(cls, maps: SpeciesMaps) -> Labels:
+        """By the limits of detection and quantification."""
+        return cls(readability(maps), {int(label): text for label, text in MEANING.items()})
 
 
 def readability(maps: SpeciesMaps) -> NDArray[np.uint8]:

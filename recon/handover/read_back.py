@@ -11,7 +11,7 @@ import numpy as np
 from numpy.typing import NDArray
 
 from recon.errors import InputError
-from recon.handover.dataset import AXES
+from recon.handover.dataset import WIDTHS
 from recon.handover.spectroscopy import read_time_cube
 from recon.result import Account, Cube, SpeciesMaps
 from recon.specimen import GridDescription
@@ -41,17 +41,12 @@ def read_dataset(folder: Path | str) -> tuple[SpeciesMaps | None, Cube | None]:
 def _maps(found: list[tuple[Path, dict[str, Any]]]) -> SpeciesMaps:
     values = [_values(_image(path)) for path, _ in found]
     errors = [_values(_image(path, "Error")) for path, _ in found if _image(path, "Error").exists()]
-    widths = [
-        np.stack([_values(_image(path, f"Width{axis}"))[:, 0, 0] for axis in AXES], axis=-1) * 1e-6
-        for path, _ in found
-        if _image(path, "WidthX").exists()
-    ]
     facts = found[0][1]
     return SpeciesMaps(
         grid=GridDescription.from_json(json.dumps(facts["Grid"])).grid(),
         values=np.stack(values),
         standard_error=np.stack(errors) if errors else None,
-        resolution=np.stack(widths) if widths else None,
+        resolution=_widths([one[WIDTHS] for _, one in found]) if WIDTHS in facts else None,
         account=_account(facts),
         names=tuple(one["Species"] for _, one in found),
     )
@@ -69,21 +64,25 @@ def _cube(path: Path, root: Path) -> Cube:
         values=values,
         account=_account(facts),
         sample_times=np.array(facts["SampleTimes_s"]),
-        larmor_frequency=header["SpectrometerFrequency"][0] * 1e6,
+        resolution=_widths(facts[WIDTHS]) if WIDTHS in facts else None,
+        larmor_frequency=facts["LarmorFrequency_Hz"],
         reference_shift_ppm=header["ReferenceShift_ppm"]["Value"],
     )
 
 
 def _account(facts: dict[str, Any]) -> Account:
-    misfit = facts["Misfit"]
     return Account(
         prior=facts["Prior"],
-        weights=facts["PriorWeights"],
+        weights={name: float(one) for name, one in facts["PriorWeights"].items()},
         why_stopped=facts["WhyStopped"],
-        misfit=misfit if isinstance(misfit, float) else float("nan"),
+        misfit=float(facts["Misfit"]),
         provenance=facts["Provenance"],
         remarks=tuple(facts["Remarks"]),
     )
+
+
+def _widths(rows: Any) -> NDArray[np.float64]:
+    return np.array(rows, dtype=object).astype(np.float64)
 
 
 def _image(sidecar: Path, addition: str = "") -> Path:

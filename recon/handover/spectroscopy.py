@@ -47,6 +47,11 @@ def header_facts(cube: Cube) -> dict[str, Any]:
             "Value": "transverse magnetisation, A/m",
             "Description": "What the complex values are, and their unit",
         },
+        "TimesMean": {
+            "Value": "EchoTime: first sample after the excitation, at least 1 us; "
+            "RepetitionTime: length of the decay",
+            "Description": "What the two times mean here: there is no echo",
+        },
     }
 
 
@@ -81,7 +86,12 @@ def write_time_cube(
     beside = path.with_name(path.name.removesuffix(".gz").removesuffix(".nii") + ".json")
     with atomic_path(path) as temporary, atomic_path(beside) as sidecar:
         nibabel.save(image, temporary)
-        text = json.dumps(sidecar_facts(header) | dict(facts or {}), indent=2, ensure_ascii=False)
+        text = json.dumps(
+            sidecar_facts(header) | dict(facts or {}),
+            indent=2,
+            ensure_ascii=False,
+            allow_nan=False,
+        )
         sidecar.write_text(text + "\n", encoding="utf-8")
     return [path, beside]
 
@@ -96,6 +106,7 @@ def sidecar_facts(header: Mapping[str, Any]) -> dict[str, Any]:
         "RepetitionTime": header["RepetitionTime"],
         "ReferenceShift_ppm": header["ReferenceShift_ppm"]["Value"],
         "Quantity": header["Quantity"]["Value"],
+        "TimesMean": header["TimesMean"]["Value"],
     }
 
 
