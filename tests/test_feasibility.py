@@ -15,6 +15,7 @@ from recon.errors import InputError
 from recon.planning.bound import Bound
 from recon.planning.feasibility import Feasibility
 from recon.planning.limits import Limits
+from recon.planning.mends import block_gain, needed_gain
 from recon.planning.single_volume import SingleVolume
 from recon.planning.sweep import Dial, sweep
 from recon.planning.tables import LowDiscrepancy, UniformRandom
@@ -52,7 +53,7 @@ def test_ten_picolitres_hyperpolarised_detect_about_a_millimolar():
 
 def test_verdict_says_what_binds_and_by_what_factor():
     rich, poor = feasibility(1000.0), feasibility(0.1)
-    assert "feasible at the lowest plane" in rich.report()
+    assert "verdict: feasible" in rich.report()
     text = poor.report()
     assert "not feasible" in text
     factor = float(re.search(r"sensor noise ([\d.e+]+)", text)[1])
@@ -64,7 +65,7 @@ def test_verdict_says_what_binds_and_by_what_factor():
 def test_the_stated_gain_closes_the_gap():
     """With that much more signal-to-noise the amount is just detected."""
     short = feasibility(12.0)
-    gain = short._needed_gain(0, 0)
+    gain = needed_gain(short, 0, 0)
     assert gain is not None
     mended = replace(short, experiment=replace(short.experiment, noise_gain=gain))
     assert mended.shortfall()[0, 0] == pytest.approx(1.0, rel=0.03)
@@ -95,7 +96,7 @@ def test_slow_pulses_are_named():
 
 
 def test_averaging_voxels_lowers_the_error():
-    gains = [feasibility()._block_gain(0, 0, factor) for factor in (1, 2, 4)]
+    gains = [block_gain(feasibility(), 0, 0, factor) for factor in (1, 2, 4)]
     assert gains[0] == pytest.approx(1.0)
     assert gains[0] < gains[1] < gains[2]
 

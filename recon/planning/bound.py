@@ -155,15 +155,17 @@ class Bound:
         """(G + ½ Γ⁻¹)⁻¹, (groups, blocks, q, q), double precision."""
         return np.linalg.inv(self._with_prior())
 
-    def _with_prior(self) -> ComplexArray:
-        matrix = self.quadratic.matrix.per_block.astype(complex)
+    def _with_prior(self, gain: float = 1.0) -> ComplexArray:
+        matrix: ComplexArray = self.quadratic.matrix.per_block.astype(complex)
+        matrix *= gain**2
         index = np.arange(matrix.shape[-1])
         matrix[..., index, index] += self.prior.T
         return matrix
 
-    def standard_error(self) -> FloatArray:
-        """With the prior, (species, nz), mM."""
-        variance = 0.5 * self.quadratic.plane_mean(self._posterior)
+    def standard_error(self, gain: float = 1.0) -> FloatArray:
+        """With the prior, (species, nz), mM; `gain` times the signal-to-noise."""
+        posterior = self._posterior if gain == 1 else np.linalg.inv(self._with_prior(gain))
+        variance = 0.5 * self.quadratic.plane_mean(posterior)
         return np.sqrt(np.maximum(variance, 0)) * self.unit[:, None]
 
     def standard_error_without_prior(self) -> FloatArray:
@@ -188,12 +190,22 @@ class Bound:
             return values[..., -1] / values[..., 0]
 
     def sensitivity(self, species: int = 0) -> tuple[FloatArray, FloatArray]:
-        """Lateral wavenumber κ (K,) in rad/m and 1/error per depth (nz, K), 1/mM, ring means."""
-        if self.quadratic.matrix.groups > 1 or self.quadratic.layout.aliases != (1, 1):
-            raise InputError("needs one channel per voxel and shared blocks", "sensitivity")
+        """Lateral wavenumber κ (K,) in rad/m and 1/error per depth (nz, K), 1/mM, ring means.
+
+        Raises
+        ------
+        InputError
+            Camera pixels span several voxels: frequencies then share blocks.
+        """
+        if self.quadratic.layout.aliases != (1, 1):
+            raise InputError("needs one channel per voxel", "sensitivity")
         nz = self.experiment.grid.shape[0]
-        part = slice(species * nz, (species + 1) * nz)
-        diagonal = np.einsum("kqq->kq", self._posterior[0]).real[:, part]
+        diagonal = np.einsum("gkqq->gkq", self._posterior).real
+        if self.quadratic._mix is not None:
+            shares = np.abs(self.quadratic._mix[species]) ** 2
+            diagonal = np.tensordot(shares, diagonal, 1)
+        else:
+            diagonal = diagonal[0][:, species * nz : (species + 1) * nz]
         precision = 1 / (0.5 * diagonal * self.unit[species] ** 2)
         return self._rings(precision)
 

@@ -1,8 +1,8 @@
 """Encodings to choose from: every lateral lattice wavevector for every kind of shot.
 
-A *kind* is a sensing axis, an axial wavenumber, a sensor wavevector and an evolution time; its response to an object
-frequency depends on κ' + k alone, so all lateral nuclear wavevectors of a kind are shifts of one
-another and are scored together by a correlation.
+A *kind* is a sensing axis, an axial wavenumber, a sensor wavevector and an evolution time. Its
+response to an object frequency depends on κ' + k alone, so all lateral nuclear wavevectors of a
+kind are shifts of one another and are scored together by a correlation.
 """
 
 from __future__ import annotations

@@ -225,7 +225,8 @@ class _Search:
         """Of the candidates that fit, the one with the largest fall per second."""
         variance = self.information.depth_variance()
         self.information.depth_weights = self.settings.criterion.weights(variance)
-        rates = self.scores.falls(self.information) / self.candidates.seconds * self.tie
+        rates: FloatArray = self.scores.falls(self.information) * self.tie
+        rates /= self.candidates.seconds
         if np.isfinite(room):
             rates[self.candidates.seconds > room] = -np.inf
         flat = rates.ravel()
@@ -257,8 +258,8 @@ class _Search:
         """Swap the least useful shot for the best other one while the criterion falls."""
         for _ in range(self.settings.exchanges):
             losses = {pair: -self.information.fall(pair, -1.0) for pair in set(self.pairs)}
-            rates = [losses[pair] / self.candidates.seconds[pair] for pair in self.pairs]
-            place = int(np.argmin(rates))
+            worth = [losses[pair] / self.candidates.seconds[pair] for pair in self.pairs]
+            place = int(np.argmin(worth))
             before = self.value()
             old = self.take(place)
             self.put(self.best(budget.most - self.spent))

@@ -4,19 +4,20 @@ from __future__ import annotations
 
 from collections.abc import Iterator
 from dataclasses import dataclass, field, replace
+from functools import cached_property
 
 import numpy as np
 from numpy.typing import NDArray
 
 from recon.basis import species_basis
+from recon.instrument import OneDetector
+from recon.physics.diffusion import line_width
 from recon.planning.bound import DETECTION, Bound, Experiment
-from recon.planning.limits import Limits
+from recon.planning.limits import Limits, Loss
+from recon.planning.mends import duration, mends
 from recon.protocol import Protocol, SpectralAxis
 
 FloatArray = NDArray[np.floating]
-ComplexArray = NDArray[np.complexfloating]
-
-MOST_GAIN = 1e4
 
 
 @dataclass(frozen=True, eq=False)
@@ -37,15 +38,28 @@ class Feasibility:
     available_s: float | None = None
     limits: Limits = field(default_factory=Limits)
 
+    @cached_property
     def bound(self) -> Bound:
-        """The bound; with the loss of the wound pattern while it is listened to."""
-        return Bound.of(self.experiment, self.protocol, self._basis())
+        """The bound; with what diffusion takes during pulses and while the pattern is heard.
 
-    def _basis(self) -> ComplexArray:
-        basis = species_basis(self.experiment.species, self.experiment.instrument, self.protocol)
-        if self.protocol.spectral_axis is not SpectralAxis.LISTEN_AFTER_ENCODING:
-            return basis
-        return basis * np.exp(-np.outer(self.protocol.sample_times, self.diffusion_rates()))
+        Pulses: each shot's amplitude falls by its own loss, a mean over species. Listening: each
+        species' decay is faster by D times the shots' mean k².
+        """
+        protocol = self.protocol
+        left = np.sqrt(self._pulse_loss().power_left(protocol.nuclear_wavevector))
+        weakened = replace(protocol, amplitude=protocol.amplitude * left)
+        if not self._listens:
+            return Bound.of(self.experiment, weakened)
+        basis = species_basis(self.experiment.species, self.experiment.instrument, protocol)
+        faster = np.exp(-np.outer(protocol.sample_times, self.diffusion_rates()))
+        return Bound.of(self.experiment, weakened, basis * faster)
+
+    @property
+    def _listens(self) -> bool:
+        return self.protocol.spectral_axis is SpectralAxis.LISTEN_AFTER_ENCODING
+
+    def _pulse_loss(self) -> Loss:
+        return Loss.of(self.experiment.instrument, self.limits, self.experiment.species)
 
     def diffusion_rates(self) -> FloatArray:
         """D ⟨k²⟩ over the shots, (species,), 1/s: the mean extra decay while listening."""
@@ -54,37 +68,63 @@ class Feasibility:
 
     def shortfall(self) -> FloatArray:
         """Detection limit over expected amount, (species, nz); above 1 the amount is not seen."""
-        return self.bound().detection_limit() / np.asarray(self.amounts_mM)[:, None]
+        return self.bound.detection_limit() / np.asarray(self.amounts_mM)[:, None]
 
     def seconds(self) -> float:
-        """Time of the table with its averages, gradient pulses included."""
-        shot = self.limits.shot_time(self.experiment.instrument, self.protocol.nuclear_wavevector)
-        clock = self.protocol.clock_time
-        waited = float(clock[-1] - clock[0]) + float(shot[-1] * self.protocol.averages[-1])
-        return max(float((shot * self.protocol.averages).sum()), waited)
+        """Time of the table with averages, excitations and gradient pulses, or by its clock."""
+        protocol = self.protocol
+        shot = self.limits.shot_time(
+            self.experiment.instrument, protocol.nuclear_wavevector, protocol.evolution_time
+        )
+        clock = protocol.clock_time
+        waited = float(clock[-1] - clock[0]) + float(shot[-1] * protocol.averages[-1])
+        return max(float((shot * protocol.averages).sum()), waited)
 
     def binding(self) -> dict[str, float]:
-        """By what factor each limit is exceeded (above 1) or kept (below 1)."""
-        instrument, grid = self.experiment.instrument, self.experiment.grid
+        """By what factor each limit is exceeded (above 1) or kept (below 1).
+
+        Sensor noise: detection limit over amount in the lowest plane. Standoff: how much worse
+        the highest plane is than the lowest, or than just enough. Gradient strength: wavenumber
+        of a voxel, π/d, over what nuclear gradient and field band reach together. Spectral
+        resolution and line width: over the least distance of two lines. Diffusion: width
+        πD/d² while listening, over the same. Time: needed over available.
+        """
+        grid, protocol = self.experiment.grid, self.protocol
         short = self.shortfall()
         voxel = min(grid.voxel[1:])
-        reach = float(instrument.nuclear_wavevector_limit[:2].min())
         closest, width = self.closest_lines()
-        length = float(self.protocol.sample_times[-1] - self.protocol.sample_times[0])
+        times = protocol.sample_times + protocol.evolution_time[:, None]
+        length = float(times.max() - times.min())
         factors = {
             "sensor noise": float(short[:, 0].max()),
-            "standoff": float((short[:, -1] / short[:, 0]).max()),
-            "gradient strength": np.pi / voxel / reach if reach > 0 else np.inf,
+            "standoff": float((short[:, -1] / np.maximum(short[:, 0], 1)).max()),
+            "gradient strength": np.pi / voxel / self.lateral_reach(),
         }
         if np.isfinite(closest):
             factors["spectral resolution"] = (1 / length if length > 0 else np.inf) / closest
             factors["line width"] = width / closest
-            if self.protocol.spectral_axis is SpectralAxis.LISTEN_AFTER_ENCODING:
+            if self._listens:
                 widest = max(one.diffusion for one in self.experiment.species)
-                factors["diffusion"] = np.pi * widest / voxel**2 / closest
+                factors["diffusion"] = line_width(widest, voxel) / closest
         if self.available_s is not None:
             factors["time"] = self.seconds() / self.available_s
         return factors
+
+    def lateral_reach(self) -> float:
+        """Highest object wavenumber that is encoded, rad/m: nuclear gradient plus field band.
+
+        The field band ends at 1/(height + depth) of the lowest plane, at the pixels or the optical
+        cut-off 4π NA/λ of a camera, at the sensor gradient of one detector.
+        """
+        instrument = self.experiment.instrument
+        heard = 1 / (float(self.experiment.grid.heights[0]) + instrument.depth)
+        sensor = float(instrument.sensor_wavevector_limit.min())
+        if isinstance(instrument.detector, OneDetector):
+            heard = min(heard, sensor)
+        else:
+            cut = 4 * np.pi * instrument.optics.numerical_aperture / instrument.optics.wavelength
+            heard = min(heard, sensor + min(np.pi / max(instrument.pixel), cut))
+        return max(float(instrument.nuclear_wavevector_limit[:2].min()) + heard, 1e-300)
 
     def closest_lines(self) -> tuple[float, float]:
         """Least distance between two lines, and the wider of the two's width 1/(π T2*), Hz."""
@@ -114,122 +154,61 @@ class Feasibility:
         closest, _ = self.closest_lines()
         if self.protocol.spectral_axis is SpectralAxis.LISTEN_AFTER_ENCODING:
             for one in self.experiment.species:
-                width = np.pi * one.diffusion / min(grid.voxel[1:]) ** 2
+                width = line_width(one.diffusion, min(grid.voxel[1:]))
                 if width > closest:
                     yield (
                         f"diffusion widens {one.name} to {width:.3g} Hz, beyond the least "
                         f"distance of lines, {closest:.3g} Hz: evolve first, then encode"
                     )
-        duty = pulse / self.limits.shot_time(instrument, self.protocol.nuclear_wavevector)
+        duty = pulse / (self.limits.base_duration_s + self.limits.pause_s + pulse)
         yield (
             f"gradient duty cycle up to {100 * duty.max():.2g} %: check the heating of the wires "
             "against your own limits and local rules"
         )
 
-    def mends(self) -> Iterator[str]:
-        """What would close the largest shortfall, each with its figure."""
-        short = self.shortfall()
-        worst = float(short.max())
-        if worst <= 1:
-            return
-        species, depth = np.unravel_index(int(short.argmax()), short.shape)
-        name = self.experiment.species[species].name
-        height = self.experiment.grid.heights[depth] * 1e6
-        yield f"for {name} at {height:.3g} µm, short by a factor of {worst:.3g}:"
-        share = self.experiment.species[species].polarisation
-        start = "thermal" if share is None else f"{share:.2g}"
-        gain = self._needed_gain(int(species), int(depth))
-        if gain is None:
-            yield f"  no gain up to {MOST_GAIN:g} closes it: the shots do not reach this depth"
-        else:
-            yield f"  {gain:.3g} times the polarisation (now {start}) or signal-to-noise"
-            yield f"  or {gain**2:.3g} times the averages: {_duration(self.seconds() * gain**2)}"
-        for factor in (2, 4):
-            less = self._block_gain(int(species), int(depth), factor)
-            yield f"  or reading {factor} x {factor} voxels as one: error divided by {less:.3g}"
-        thin = self._thinner(0.5)
-        if thin is not None:
-            less = float(short[species, depth] / thin[species, depth])
-            if less > 1.02:
-                yield f"  or half the depth of the layer: error divided by {less:.3g}"
-        if self.protocol.spectral_axis is SpectralAxis.LISTEN_AFTER_ENCODING:
-            yield "  or evolving first and encoding then, where diffusion does not count"
-
-    def _block_gain(self, species: int, depth: int, factor: int) -> float:
-        """Error of a voxel over the error of the mean of factor x factor voxels."""
-        bound = self.bound()
-        _, ny, nx = self.experiment.grid.shape
-        kernel = np.zeros((ny, nx))
-        kernel[:factor, :factor] = 1 / factor**2
-        transfer = np.abs(np.fft.fft2(kernel)) ** 2
-        diagonal = np.einsum("gkqq->gkq", bound._posterior).real
-        block = bound.quadratic.plane_mean_of_diagonal(
-            diagonal * bound.quadratic.spread_plane(transfer).T
-        )
-        whole = bound.quadratic.plane_mean_of_diagonal(diagonal)
-        return float(np.sqrt(whole[species, depth] / block[species, depth]))
-
-    def _needed_gain(self, species: int, depth: int) -> float | None:
-        """Least factor of signal-to-noise at which the amount is detected, by bisection."""
-        low, high = 1.0, MOST_GAIN
-
-        def short(gain: float) -> float:
-            other = replace(self.experiment, noise_gain=self.experiment.noise_gain * gain)
-            return float(replace(self, experiment=other).shortfall()[species, depth])
-
-        if short(high) > 1:
-            return None
-        for _ in range(10):
-            middle = float(np.sqrt(low * high))
-            low, high = (middle, high) if short(middle) > 1 else (low, middle)
-        return high
-
-    def _thinner(self, share: float) -> FloatArray | None:
-        layer = self.experiment.instrument.sensor_layer
-        if layer.depth_um <= 0:
-            return None
-        thin = layer.model_copy(update={"depth_um": layer.depth_um * share})
-        instrument = self.experiment.instrument.model_copy(update={"sensor_layer": thin})
-        return replace(self, experiment=replace(self.experiment, instrument=instrument)).shortfall()
-
     def report(self) -> str:
         """One screen."""
-        bound = self.bound()
-        error, heights = bound.standard_error(), self.experiment.grid.heights * 1e6
-        rows = sorted({0, len(heights) // 2, len(heights) - 1})
+        factors = self.binding()
+        told = ", ".join(f"{name} {factor:.2g}" for name, factor in factors.items())
         lines = [
-            f"{len(self.protocol)} shots, {_duration(self.seconds())}; "
+            f"{len(self.protocol)} shots, {duration(self.seconds())}; "
             f"structure of {self.experiment.expectation.feature_um:g} µm expected",
-            f"{'species':<12}{'expected':>12}  "
-            + "".join(f"{f'z {heights[r]:.3g} µm':>26}" for r in rows),
+            *self._errors(),
+            f"limits, 1 is just enough: {told}",
+            f"verdict: {verdict(factors)}",
+            *mends(self),
         ]
+        return "\n".join(lines + [f"note: {text}" for text in self.warnings()])
+
+    def _errors(self) -> Iterator[str]:
+        """Errors and resolution in the lowest, a middle and the highest plane."""
+        error, heights = self.bound.standard_error(), self.experiment.grid.heights * 1e6
+        rows = sorted({0, len(heights) // 2, len(heights) - 1})
+        yield f"{'species':<12}{'expected':>12}  " + "".join(
+            f"{f'z {heights[r]:.3g} µm':>26}" for r in rows
+        )
         for place, one in enumerate(self.experiment.species):
             amount = self.amounts_mM[place]
             cells = []
             for row in rows:
                 limit = DETECTION * error[place, row]
-                verdict = "seen" if limit <= amount else f"short {limit / amount:.2g} x"
-                cells.append(f"{f'± {error[place, row]:.3g} mM, {verdict}':>26}")
-            lines.append(f"{one.name:<12}{amount:>9.4g} mM  " + "".join(cells))
-        widths = bound.resolution() * 1e6
-        told = ", ".join(f"{widths[r, 2]:.3g} µm at z {heights[r]:.3g}" for r in rows)
-        lines.append(f"resolution across (with the expectation): {told}")
-        factors = self.binding()
-        worst = max(factors, key=lambda name: factors[name])
-        told = ", ".join(f"{name} {factor:.2g}" for name, factor in factors.items())
-        lines.append(f"limits, 1 is just enough: {told}")
-        possible = self.shortfall()[:, 0].max() <= 1
-        lines.append(
-            f"verdict: {'feasible at the lowest plane' if possible else 'not feasible'}; "
-            f"{worst} binds"
+                seen = "seen" if limit <= amount else f"short {limit / amount:.2g} x"
+                cells.append(f"{f'± {error[place, row]:.3g} mM, {seen}':>26}")
+            yield f"{one.name:<12}{amount:>9.4g} mM  " + "".join(cells)
+        widths = self.bound.resolution() * 1e6
+        told = ", ".join(
+            f"{widths[r, 2]:.3g} µm across, {widths[r, 0]:.3g} µm along z at {heights[r]:.3g} µm"
+            for r in rows
         )
-        lines += list(self.mends())
-        lines += [f"note: {text}" for text in self.warnings()]
-        return "\n".join(lines)
+        yield f"resolution with the expectation: {told}"
 
 
-def _duration(seconds: float) -> str:
-    for unit, size in (("years", 3.156e7), ("days", 86400.0), ("h", 3600.0), ("min", 60.0)):
-        if seconds >= 2 * size:
-            return f"{seconds / size:.3g} {unit}"
-    return f"{seconds:.3g} s"
+def verdict(factors: dict[str, float]) -> str:
+    """Feasible or not, and what binds."""
+    worst = max(factors, key=lambda name: factors[name])
+    if factors[worst] <= 1:
+        return f"feasible; {worst} is nearest to its limit"
+    excess = f"{worst} binds, by a factor of {factors[worst]:.3g}"
+    if factors["sensor noise"] <= 1 and factors.get("time", 0) <= 1:
+        return f"feasible at the lowest plane, with limits: {excess}"
+    return f"not feasible: {excess}"

@@ -66,7 +66,7 @@ class Information:
         self.responses, self.spectra = responses, spectra
         self.shape = responses.candidates.grid.shape
         self.cosets = Cosets(self.shape[1:], responses.aliases)
-        self.depth_weights = np.ones(self.shape[0])
+        self.depth_weights: FloatArray = np.ones(self.shape[0])
         members = prior.ravel()[self.cosets.members]
         per_component = np.repeat(members, self.shape[0], axis=1)
         self.prior = np.tile(per_component, (1, spectra.components))

@@ -5,6 +5,7 @@ Which wavevectors, how long a shot takes, how much signal is left.
 
 from __future__ import annotations
 
+from collections.abc import Sequence
 from dataclasses import dataclass
 
 import numpy as np
@@ -14,6 +15,7 @@ from recon.errors import InputError
 from recon.instrument import Instrument
 from recon.physics.magnetisation import GYROMAGNETIC_RATIO
 from recon.protocol import Protocol, SpectralAxis
+from recon.specimen import Species
 
 FloatArray = NDArray[np.floating]
 
@@ -120,6 +122,23 @@ class Loss:
     diffusion: FloatArray
     t2_star: FloatArray
     listened: FloatArray
+
+    @classmethod
+    def of(
+        cls,
+        instrument: Instrument,
+        limits: Limits,
+        species: Sequence[Species],
+        listened: FloatArray | None = None,
+    ) -> Loss:
+        """For the species of a specimen; the pattern is read at once unless listened to."""
+        return cls(
+            instrument,
+            limits,
+            np.array([one.diffusion for one in species]),
+            np.array([one.t2_star for one in species]),
+            np.zeros(1) if listened is None else np.asarray(listened, float),
+        )
 
     def power_left(self, nuclear: FloatArray) -> FloatArray:
         """Share of the power for wavevectors k (shots, 3), (shots,)."""

@@ -28,7 +28,7 @@ class Scores:
     def __init__(self, information: Information) -> None:
         self.responses = information.responses
         self.candidates = information.responses.candidates
-        nz, ny, nx = self.candidates.grid.shape
+        _, ny, nx = self.candidates.grid.shape
         blocks, aliases = information.cosets.members.shape
         self._aliases = aliases
         self._alias = np.empty(ny * nx, int)

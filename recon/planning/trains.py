@@ -83,16 +83,18 @@ class Hyperpolarised:
         return signal[inside], clock
 
 
-def in_train(protocol: Protocol, train: Train, shot_duration: float) -> Protocol:
+def in_train(
+    protocol: Protocol, train: Train, excitation_s: float, excitations: int = 1
+) -> Protocol:
     """The same table with the amplitudes and clock times of a train, in the table's order.
 
-    Averages of a shot are taken as successive shots of the train; the shot has their r.m.s.
-    amplitude, which gives the same information.
+    Averages of a shot, and the excitations of one average, are taken as successive excitations of
+    the train; the shot has their r.m.s. amplitude, which gives the same information.
     """
-    averages = np.asarray(protocol.averages)
-    signal, clock = train.amplitudes(int(averages.sum()), shot_duration)
-    first = np.concatenate([[0], np.cumsum(averages)[:-1]])
-    power = np.add.reduceat(signal**2, first) / averages
+    counts = np.asarray(protocol.averages) * excitations
+    signal, clock = train.amplitudes(int(counts.sum()), excitation_s)
+    first = np.concatenate([[0], np.cumsum(counts)[:-1]])
+    power = np.add.reduceat(signal**2, first) / counts
     amplitude = protocol.amplitude * np.sqrt(power)
     return replace(protocol, amplitude=amplitude, clock_time=clock[first])
 
