@@ -1,0 +1,58 @@
+"""What a fit of all voxels gives."""
+
+from __future__ import annotations
+
+from dataclasses import dataclass
+
+import numpy as np
+from numpy.typing import NDArray
+
+ComplexArray = NDArray[np.complexfloating]
+FloatArray = NDArray[np.floating]
+
+
+@dataclass(frozen=True, eq=False)
+class Fitted:
+    """Amounts of all patterns and what came with them.
+
+    Attributes
+    ----------
+    names
+        Of the patterns.
+    amounts, standard_error
+        mM, (patterns, nz, ny, nx).
+    shift_Hz, decay_per_s, phase_rad
+        Nuisances (nz, ny, nx), and `nuisance_error` (3, nz, ny, nx).
+    chi_squared
+        Σ|residual|²/σ² over degrees of freedom per voxel, expectation 1, (nz, ny, nx).
+    model
+        Fitted time courses, complex64 (times, nz, ny, nx), A/m.
+    """
+
+    names: tuple[str, ...]
+    amounts: FloatArray
+    standard_error: FloatArray
+    shift_Hz: FloatArray  # noqa: N815
+    decay_per_s: FloatArray
+    phase_rad: FloatArray
+    nuisance_error: FloatArray
+    chi_squared: FloatArray
+    model: ComplexArray
+
+    def failed_assumption(self) -> str:
+        """Which assumption the data refuse, by the size of nuisances in their own errors."""
+        told = []
+        for name, value, error in (
+            ("line positions (shift)", self.shift_Hz, self.nuisance_error[0]),
+            ("line widths (decay)", self.decay_per_s, self.nuisance_error[1]),
+            ("phase", self.phase_rad, self.nuisance_error[2]),
+        ):
+            used = error > 0
+            if used.any():
+                size = float(np.sqrt(np.mean((value[used] / error[used]) ** 2)))
+                if size > 2:
+                    told.append((size, f"{name}: {size:.2g} standard errors r.m.s."))
+        poor = float(np.mean(self.chi_squared > 1.5))
+        if poor > 0.05:
+            told.append((1e3 * poor, f"an unknown line or baseline: {100 * poor:.0f} % poor fits"))
+        return max(told)[1] if told else ""
