@@ -79,9 +79,8 @@ def verb(
         names=fitted.names,
     ).save(output)
     click.echo(f"{output}: {len(fitted.names)} species")
-    click.echo(
-        f"{'species':<14}{'mean':>12}{'error':>12}{'detection':>12}{'quantify':>12}  mM, lowest plane"
-    )
+    heads = ("mean", "error", "detection", "quantify")
+    click.echo(f"{'lowest, mM':<14}" + "".join(f"{head:>12}" for head in heads))
     for place, name in enumerate(fitted.names):
         typical = float(np.sqrt((error[place, 0].astype(float) ** 2).mean()))
         mean = float(values[place, 0].mean())
