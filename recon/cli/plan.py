@@ -203,7 +203,11 @@ def verb(specimen: Path, instrument: Path, **given: object) -> None:
     if options.picture is not None:
         wave, response = plan.bound.sensitivity()
         picture = figures.sensitivity(
-            wave, response, setting.grid, quantity=f"1 / error of {sample.names[0]}", unit="1/mM"
+            wave,
+            response,
+            setting.grid,
+            quantity=f"1 / error of {sample.names[0]} by the shots alone",
+            unit="1/mM",
         )
         click.echo(f"{figures.save(picture, options.picture)}")
 

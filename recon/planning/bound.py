@@ -190,7 +190,10 @@ class Bound:
             return values[..., -1] / values[..., 0]
 
     def sensitivity(self, species: int = 0) -> tuple[FloatArray, FloatArray]:
-        """Lateral wavenumber κ (K,) in rad/m and 1/error per depth (nz, K), 1/mM, ring means.
+        """Lateral wavenumber κ (K,) in rad/m, and what the shots tell of each depth, (nz, K).
+
+        √(1/variance − 1/variance before), 1/mM, means over rings of κ: the inverse error that the
+        shots alone give an amplitude, the other depths and species being unknown.
 
         Raises
         ------
@@ -206,8 +209,9 @@ class Bound:
             diagonal = np.tensordot(shares, diagonal, 1)
         else:
             diagonal = diagonal[0][:, species * nz : (species + 1) * nz]
-        precision = 1 / (0.5 * diagonal * self.unit[species] ** 2)
-        return self._rings(precision)
+        before = self.prior[:nz].T
+        told = np.maximum(1 / diagonal - before, 0) * 2 / self.unit[species] ** 2
+        return self._rings(np.sqrt(told))
 
     def resolution(self, species: int = 0) -> FloatArray:
         """Width (FWHM) of the point response along (z, y, x) per depth, (nz, 3), metres.

@@ -27,6 +27,7 @@ FloatArray = NDArray[np.floating]
 Progress = Callable[[int, int], None]
 
 REFRESH = 32
+FEW = 4
 
 
 class Criterion(Interface):
@@ -255,11 +256,13 @@ class _Search:
         return pair
 
     def exchange(self, budget: Budget) -> None:
-        """Swap the least useful shot for the best other one while the criterion falls."""
+        """Swap the least useful shot for the best other one while the criterion falls.
+
+        The losses are computed once for all shots, and afresh for the least useful few.
+        """
+        losses: dict[Pair, float] = {}
         for _ in range(self.settings.exchanges):
-            losses = {pair: -self.information.fall(pair, -1.0) for pair in set(self.pairs)}
-            worth = [losses[pair] / self.candidates.seconds[pair] for pair in self.pairs]
-            place = int(np.argmin(worth))
+            place = self.least_useful(losses)
             before = self.value()
             old = self.take(place)
             self.put(self.best(budget.most - self.spent))
@@ -270,6 +273,20 @@ class _Search:
                 break
             self.exchanged += 1
         self.information.refresh()
+
+    def least_useful(self, losses: dict[Pair, float]) -> int:
+        """Place of the shot whose removal costs least per second; updates `losses`."""
+
+        def loss(pair: Pair) -> float:
+            return -self.information.fall(pair, -1.0) / float(self.candidates.seconds[pair])
+
+        for pair in self.pairs:
+            if pair not in losses:
+                losses[pair] = loss(pair)
+        known = sorted(set(self.pairs), key=lambda pair: losses[pair])
+        for pair in known[:FEW]:
+            losses[pair] = loss(pair)
+        return int(np.argmin([losses[pair] for pair in self.pairs]))
 
     def result(self, spectral_axis: SpectralAxis) -> Chosen:
         protocol = self.candidates.protocol(self.pairs, self.times, spectral_axis=spectral_axis)

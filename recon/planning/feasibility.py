@@ -2,7 +2,8 @@
 
 from __future__ import annotations
 
-from collections.abc import Iterator
+import itertools
+from collections.abc import Callable, Iterator
 from dataclasses import dataclass, field, replace
 from functools import cached_property
 
@@ -16,6 +17,7 @@ from recon.planning.bound import DETECTION, Bound, Experiment
 from recon.planning.limits import Limits, Loss
 from recon.planning.mends import duration, mends
 from recon.protocol import Protocol, SpectralAxis
+from recon.specimen import Species
 
 FloatArray = NDArray[np.floating]
 
@@ -86,13 +88,12 @@ class Feasibility:
         Sensor noise: detection limit over amount in the lowest plane. Standoff: how much worse
         the highest plane is than the lowest, or than just enough. Gradient strength: wavenumber
         of a voxel, π/d, over what nuclear gradient and field band reach together. Spectral
-        resolution and line width: over the least distance of two lines. Diffusion: width
-        πD/d² while listening, over the same. Time: needed over available.
+        resolution and line width: over the distance to the next line. Diffusion: width πD/d² while
+        listening, over the same. Time: needed over available.
         """
         grid, protocol = self.experiment.grid, self.protocol
         short = self.shortfall()
         voxel = min(grid.voxel[1:])
-        closest, width = self.closest_lines()
         times = protocol.sample_times + protocol.evolution_time[:, None]
         length = float(times.max() - times.min())
         factors = {
@@ -100,12 +101,12 @@ class Feasibility:
             "standoff": float((short[:, -1] / np.maximum(short[:, 0], 1)).max()),
             "gradient strength": np.pi / voxel / self.lateral_reach(),
         }
-        if np.isfinite(closest):
-            factors["spectral resolution"] = (1 / length if length > 0 else np.inf) / closest
-            factors["line width"] = width / closest
+        if len(self.experiment.species) > 1:
+            longest = 1 / length if length > 0 else np.inf
+            factors["spectral resolution"] = self.crowding(lambda one: longest)
+            factors["line width"] = self.crowding(lambda one: 1 / (np.pi * one.t2_star))
             if self._listens:
-                widest = max(one.diffusion for one in self.experiment.species)
-                factors["diffusion"] = line_width(widest, voxel) / closest
+                factors["diffusion"] = self.crowding(lambda one: line_width(one.diffusion, voxel))
         if self.available_s is not None:
             factors["time"] = self.seconds() / self.available_s
         return factors
@@ -126,18 +127,20 @@ class Feasibility:
             heard = min(heard, sensor + min(np.pi / max(instrument.pixel), cut))
         return max(float(instrument.nuclear_wavevector_limit[:2].min()) + heard, 1e-300)
 
-    def closest_lines(self) -> tuple[float, float]:
-        """Least distance between two lines, and the wider of the two's width 1/(π T2*), Hz."""
-        species = self.experiment.species
-        place = np.array([s.shift_ppm for s in species]) * 1e-6
-        place = place * self.experiment.instrument.larmor_frequency
-        order = np.argsort(place)
-        if len(order) < 2:
-            return np.inf, 0.0
-        steps = np.diff(place[order])
-        at = int(np.argmin(steps))
-        width = max(1 / (np.pi * species[order[i]].t2_star) for i in (at, at + 1))
-        return float(steps[at]), float(width)
+    def neighbours(self) -> Iterator[tuple[float, Species, Species]]:
+        """Species whose lines are next to each other, and the distance, Hz."""
+        hertz = self.experiment.instrument.larmor_frequency * 1e-6
+        order = sorted(self.experiment.species, key=lambda one: one.shift_ppm)
+        for low, high in itertools.pairwise(order):
+            yield (high.shift_ppm - low.shift_ppm) * hertz, low, high
+
+    def crowding(self, width: Callable[[Species], float]) -> float:
+        """Largest line width over the distance to the next line."""
+        found = [
+            max(width(low), width(high)) / distance if distance > 0 else np.inf
+            for distance, low, high in self.neighbours()
+        ]
+        return max(found, default=0.0)
 
     def warnings(self) -> Iterator[str]:
         """What the user should know of, beyond the numbers."""
@@ -151,15 +154,17 @@ class Feasibility:
                     f"less than the longest gradient pulse of {pulse.max() * 1e3:.3g} ms: use "
                     "stronger, shorter pulses"
                 )
-        closest, _ = self.closest_lines()
-        if self.protocol.spectral_axis is SpectralAxis.LISTEN_AFTER_ENCODING:
-            for one in self.experiment.species:
-                width = line_width(one.diffusion, min(grid.voxel[1:]))
-                if width > closest:
-                    yield (
-                        f"diffusion widens {one.name} to {width:.3g} Hz, beyond the least "
-                        f"distance of lines, {closest:.3g} Hz: evolve first, then encode"
-                    )
+        if self._listens:
+            edge = min(grid.voxel[1:])
+            for distance, *pair in self.neighbours():
+                for one in pair:
+                    width = line_width(one.diffusion, edge)
+                    if width > distance:
+                        yield (
+                            f"diffusion widens {one.name} to {width:.3g} Hz, beyond the distance "
+                            f"between {pair[0].name} and {pair[1].name}, {distance:.3g} Hz: evolve "
+                            "first, then encode"
+                        )
         duty = pulse / (self.limits.base_duration_s + self.limits.pause_s + pulse)
         yield (
             f"gradient duty cycle up to {100 * duty.max():.2g} %: check the heating of the wires "
@@ -184,7 +189,7 @@ class Feasibility:
         """Errors and resolution in the lowest, a middle and the highest plane."""
         error, heights = self.bound.standard_error(), self.experiment.grid.heights * 1e6
         rows = sorted({0, len(heights) // 2, len(heights) - 1})
-        yield f"{'species':<12}{'expected':>12}  " + "".join(
+        yield f"{'':<12}{'expected':>12}  " + "".join(
             f"{f'z {heights[r]:.3g} µm':>26}" for r in rows
         )
         for place, one in enumerate(self.experiment.species):
@@ -193,14 +198,13 @@ class Feasibility:
             for row in rows:
                 limit = DETECTION * error[place, row]
                 seen = "seen" if limit <= amount else f"short {limit / amount:.2g} x"
-                cells.append(f"{f'± {error[place, row]:.3g} mM, {seen}':>26}")
+                cells.append(f"{f'± {error[place, row]:.3g}, {seen}':>26}")
             yield f"{one.name:<12}{amount:>9.4g} mM  " + "".join(cells)
         widths = self.bound.resolution() * 1e6
-        told = ", ".join(
-            f"{widths[r, 2]:.3g} µm across, {widths[r, 0]:.3g} µm along z at {heights[r]:.3g} µm"
-            for r in rows
+        yield (
+            f"{'resolution, across and along z (µm)':<26}".ljust(26)
+            + "".join(f"{f'{widths[r, 2]:.3g}, {widths[r, 0]:.3g}':>26}" for r in rows)[9:]
         )
-        yield f"resolution with the expectation: {told}"
 
 
 def verdict(factors: dict[str, float]) -> str:
