@@ -128,7 +128,7 @@ def test_sweep_turns_the_description():
 def test_dials_that_turn_nothing(text, says):
     setting = planning.experiment(species=planning.SPECIES)
     with pytest.raises(InputError, match=says):
-        Dial.parse(text).turned(setting, Dial.parse(text).values[0])
+        Dial.parse(text).turned(setting, planning.table(), Dial.parse(text).values[0])
 
 
 def test_low_discrepancy_fills_more_evenly_than_chance():

@@ -40,8 +40,9 @@ def verb(
 ) -> None:
     """Detection limit in mM over FIRST and SECOND, each written as NAME=NUMBER,NUMBER,...
 
-    NAME is a path in the description, such as instrument.sensor_layer.depth_um or
-    species.lactate.polarisation.
+    NAME is a path in the description, such as instrument.sensor_layer.depth_um,
+    instrument.bias_field_mT.z or species.lactate.polarisation, or one of grid.voxel_um,
+    protocol.averages, expectation.feature_um, readout.noise_gain.
     """
     dials = Dial.parse(first), Dial.parse(second)
     sample = Specimen.from_toml(specimen)
