@@ -2,19 +2,23 @@
 
     python bench/joint_encoding.py --json [--figure joint.png]
 
-(a) One detector sees the field frequency κ = q alone: pairs (k, q) with the same k + q look at the
-    same object frequency with depth weights exp(−q z). Depth resolution with no gradient along z,
-    with one |q| and with several.
-(b) A camera with pixels of four voxels: the nuclear gradient moves the object into the band; the
-    sensor gradient moves the field into the band of the optics. Errors with and without.
-(c) Tables that choose k and q together against tables that choose them separately (the best k
-    with no q, then q drawn at random), at equal time.
-All numbers are bounds with an expectation (structure of 12 µm), in units of the expected spread.
+(a) One detector sees the field frequency κ = q alone, and nothing without a sensor gradient: pairs
+    (k, q) with the same k + q look at the same object frequency with depth weights exp(−q z).
+    Depth resolution with no gradient along z: the best single |q| of four against all four, and
+    against that single |q| with a nuclear gradient along z.
+(b) A camera with pixels of four voxels and optics that end at 0.7 rad/µm: the nuclear gradient
+    moves the object into the band of the field; the sensor gradient moves the field into the band
+    of pixels and optics. With and without either.
+(c) Tables that choose k and q together against the same k and the same q paired at random, at
+    equal time; and how many times the shots the separate table needs for the same error.
+Every table is chosen by the bound. All numbers are bounds with an expectation (structure of
+12 µm), r.m.s. in units of the expected spread; gradients are strong enough not to bind.
 """
 
 from __future__ import annotations
 
 import argparse
+from dataclasses import replace
 
 import numpy as np
 from common import emit, table
@@ -27,6 +31,7 @@ from recon.planning.bound import Bound, Expectation, Experiment
 from recon.planning.candidates import Candidates, Kind, camera_kinds, detector_kinds
 from recon.planning.choice import Budget, Choice
 from recon.planning.limits import Limits
+from recon.planning.responses import Pair
 from recon.specimen import Species
 
 TIMES = np.arange(16) * 8e-3
@@ -42,6 +47,7 @@ SPECIES = (
     ),
 )
 LIMITS = Limits(largest_duty_cycle=1.0)
+RINGS = (0.1, 0.2, 0.4, 0.7)
 
 
 def apparatus(grid: Grid, detector: dict[str, object], photons: float) -> Instrument:
@@ -73,101 +79,169 @@ def apparatus(grid: Grid, detector: dict[str, object], photons: float) -> Instru
     )
 
 
-def errors(experiment: Experiment, kinds: tuple[Kind, ...], shots: int, shortlist: int = 4):
-    """Bound over spread per depth, and the axial resolution in µm, of the best table of kinds."""
+def chosen_table(
+    experiment: Experiment, kinds: tuple[Kind, ...], shots: int, still: bool = False
+) -> tuple[Candidates, list[Pair]]:
+    """The best table of these kinds; without any nuclear gradient if `still`."""
     candidates = Candidates.of(experiment.grid, experiment.instrument, kinds, LIMITS)
-    chosen = Choice(shortlist=shortlist).choose(experiment, candidates, TIMES, Budget(shots=shots))
-    bound = Bound.of(experiment, chosen.protocol)
+    if still:
+        candidates.allowed[:, candidates.steps.any(axis=1)] = False
+    chosen = Choice().choose(experiment, candidates, TIMES, Budget(shots=shots))
+    return candidates, chosen.pairs
+
+
+def bound_of(experiment: Experiment, candidates: Candidates, pairs: list[Pair]):
+    """Bound over spread per depth, and the axial width in µm per depth."""
+    bound = Bound.of(experiment, candidates.protocol(pairs, TIMES))
     return bound.standard_error()[0] / bound.unit[0], bound.resolution()[:, 0] * 1e6
 
 
-def one_detector() -> tuple[dict[str, np.ndarray], dict[str, np.ndarray], Grid]:
+def total(error: np.ndarray) -> float:
+    """R.m.s. over depths."""
+    return float(np.sqrt((error**2).mean()))
+
+
+def detector_scene() -> Experiment:
     grid = Grid((4, 16, 16), (4e-6, 4e-6, 4e-6))
-    experiment = Experiment(apparatus(grid, {}, 1e11), grid, SPECIES, Expectation((20.0,), 12.0))
-    rings = {
-        "one |q| of 0.1 rad/µm": (0.1,),
-        "one |q| of 0.3 rad/µm": (0.3,),
-        "|q| from 0.1 to 0.7 rad/µm": (0.1, 0.2, 0.4, 0.7),
+    return Experiment(apparatus(grid, {}, 1e11), grid, SPECIES, Expectation((20.0,), 12.0))
+
+
+def one_detector(experiment: Experiment, shots: int = 800):
+    """Errors and axial widths per depth of each encoding."""
+    single = {wave: detector_kinds(experiment.grid, (wave,), 8) for wave in RINGS}
+    found = {
+        wave: bound_of(experiment, *chosen_table(experiment, kinds, shots))
+        for wave, kinds in single.items()
     }
-    error, width = {}, {}
-    for name, waves in rings.items():
-        kinds = detector_kinds(grid, waves, 8)
-        error[name], width[name] = errors(experiment, kinds, 800, 1)
-    return error, width, grid
-
-
-def coarse_camera() -> tuple[dict[str, np.ndarray], Grid]:
-    grid = Grid((2, 32, 32), (2e-6, 2e-6, 2e-6))
-    camera = {"pixel_um": 8.0, "aperture": 0.12}
-    experiment = Experiment(apparatus(grid, camera, 1e7), grid, SPECIES, Expectation((20.0,), 12.0))
-    step = grid.lattice_step[0]
-    ring = [round(w * 1e6 / step) for w in (0.4, 0.8)]
-    sensor = (
-        [(0, 0)]
-        + [(s * r, 0) for r in ring for s in (1, -1)]
-        + [(0, s * r) for r in ring for s in (1, -1)]
+    for wave, (error, _) in found.items():
+        print(f"    one |q| of {wave:g} rad/µm: error over spread {total(error):.3f}")
+    best = min(found, key=lambda wave: total(found[wave][0]))
+    axial = tuple(
+        replace(kind, axial=wave) for kind in single[best] for wave in (-4e5, -2e5, 0, 2e5, 4e5)
     )
+    several = detector_kinds(experiment.grid, RINGS, 8)
+    return {
+        f"one |q|, {best:g} rad/µm": found[best],
+        f"{best:g} rad/µm and a z gradient": bound_of(
+            experiment, *chosen_table(experiment, axial, shots)
+        ),
+        f"|q| from {RINGS[0]:g} to {RINGS[-1]:g} rad/µm": bound_of(
+            experiment, *chosen_table(experiment, several, shots)
+        ),
+    }
+
+
+def camera_scene() -> Experiment:
+    grid = Grid((2, 32, 32), (2e-6, 2e-6, 2e-6))
+    camera = {"pixel_um": 8.0, "aperture": 0.04}
+    return Experiment(apparatus(grid, camera, 1e7), grid, SPECIES, Expectation((20.0,), 12.0))
+
+
+def camera_kinds_with(experiment: Experiment, sensor: bool) -> tuple[Kind, ...]:
+    """No sensor gradient, or four directions of two lengths too."""
+    if not sensor:
+        return camera_kinds()
+    step = experiment.grid.lattice_step[0]
+    ring = [s * round(w * 1e6 / step) for w in (0.4, 0.8) for s in (1, -1)]
+    return camera_kinds(sensor_steps=((0, 0), *((r, 0) for r in ring), *((0, r) for r in ring)))
+
+
+def coarse_camera(experiment: Experiment, shots: int = 48) -> dict[str, np.ndarray]:
+    """Errors per depth with and without either gradient."""
     found = {}
-    for name, shifts, nuclear in (
-        ("neither gradient", [(0, 0)], False),
-        ("sensor gradient only", sensor, False),
-        ("nuclear gradient only", [(0, 0)], True),
-        ("both gradients", sensor, True),
+    for name, sensor, still in (
+        ("neither gradient", False, True),
+        ("sensor gradient only", True, True),
+        ("nuclear gradient only", False, False),
+        ("both gradients", True, False),
     ):
-        found[name] = camera_errors(experiment, camera_kinds(sensor_steps=tuple(shifts)), nuclear)
-    return found, grid
+        kinds = camera_kinds_with(experiment, sensor)
+        found[name] = bound_of(experiment, *chosen_table(experiment, kinds, shots, still))[0]
+    return found
 
 
-def camera_errors(experiment: Experiment, kinds, nuclear: bool, shots: int = 48) -> np.ndarray:
-    """Coarse pixels alias; tables are drawn at random over kinds, the bound is exact."""
-    candidates = Candidates.of(experiment.grid, experiment.instrument, kinds, LIMITS)
-    rng = np.random.default_rng(1)
-    spread = np.linalg.norm(candidates.steps, axis=1)
-    chance = np.exp(-0.5 * (spread / 6) ** 2) if nuclear else (spread == 0).astype(float)
-    places = rng.choice(len(spread), shots, p=chance / chance.sum())
-    pairs = [(int(i % len(kinds)), int(p)) for i, p in enumerate(places)]
-    bound = Bound.of(experiment, candidates.protocol(pairs, TIMES))
-    return bound.standard_error()[0] / bound.unit[0]
+def apart(experiment: Experiment, candidates: Candidates, pairs: list[Pair], times: int):
+    """Errors of five tables with the same k and the same q, `times` as many, paired at random."""
+    errors = []
+    for seed in range(5):
+        rng = np.random.default_rng(seed)
+        kinds, places = (np.tile(np.array(side), times) for side in zip(*pairs, strict=True))
+        mixed = list(zip(kinds.tolist(), rng.permutation(places).tolist(), strict=True))
+        errors.append(total(bound_of(experiment, candidates, mixed)[0]))
+    return float(np.mean(errors)), float(np.std(errors))
 
 
-def correlated() -> dict[str, np.ndarray]:
-    grid = Grid((4, 16, 16), (4e-6, 4e-6, 4e-6))
-    experiment = Experiment(apparatus(grid, {}, 1e11), grid, SPECIES, Expectation((20.0,), 12.0))
-    kinds = detector_kinds(grid, (0.1, 0.2, 0.4, 0.7), 8)
-    candidates = Candidates.of(grid, experiment.instrument, kinds, LIMITS)
-    together, _ = errors(experiment, kinds, 400, 1)
-    rng = np.random.default_rng(0)
-    spread = np.linalg.norm(candidates.steps, axis=1)
-    chance = np.exp(-0.5 * (spread / 5) ** 2)
-    places = rng.choice(len(spread), 400, p=chance / chance.sum())
-    pairs = list(zip(rng.integers(len(kinds), size=400).tolist(), places.tolist(), strict=True))
-    bound = Bound.of(experiment, candidates.protocol(pairs, TIMES))
-    return {"together": together, "separately": bound.standard_error()[0] / bound.unit[0]}
+def same_object_frequencies(
+    experiment: Experiment, candidates: Candidates, pairs: list[Pair]
+) -> float:
+    """The same k + q with q dealt anew at random, where k stays on the lattice; five draws."""
+    place_of = {tuple(step): place for place, step in enumerate(candidates.steps.tolist())}
+    errors = []
+    for seed in range(5):
+        dealt = np.random.default_rng(seed).permutation([kind for kind, _ in pairs])
+        mixed = []
+        for (kind, place), other in zip(pairs, dealt, strict=True):
+            away = np.subtract(candidates.kinds[kind].sensor, candidates.kinds[other].sensor)
+            moved = place_of.get(tuple((candidates.steps[place] + away).tolist()))
+            mixed.append((kind, place) if moved is None else (int(other), moved))
+        errors.append(total(bound_of(experiment, candidates, mixed)[0]))
+    return float(np.mean(errors))
 
 
-def draw(path: str, error: dict[str, np.ndarray], camera: dict[str, np.ndarray], grids) -> None:
-    """Errors over height, with and without."""
+def correlated(experiment: Experiment, kinds: tuple[Kind, ...], shots: int) -> dict[str, object]:
+    """Together, apart at 1, 2, 4 and 8 times the shots, and the factor at equal error."""
+    candidates, pairs = chosen_table(experiment, kinds, shots)
+    together = total(bound_of(experiment, candidates, pairs)[0])
+    factors = (1, 2, 4, 8)
+    separate = [apart(experiment, candidates, pairs, times) for times in factors]
+    curve = [mean for mean, _ in separate]
+    needed = np.inf
+    if curve[-1] <= together:
+        needed = 2 ** np.interp(-together, -np.array(curve), np.log2(factors))
+    return {
+        "shots": shots, "together": together, "factors": factors, "separate": separate,
+        "needed": float(needed), "same sum": same_object_frequencies(experiment, candidates, pairs),
+    }  # fmt: skip
+
+
+def draw(path: str, detector, camera, tables, grids) -> None:
+    """Errors over height with and without; errors over shots together and apart."""
     with style.applied():
-        figure = style.new_figure(style.PAGE_WIDTH, 3.4)
-        panels = figure.subplots(1, 2)
-        for panel, found, grid, title in zip(
-            panels, (error, camera), grids, ("one detector", "camera, 8 µm pixels"), strict=True
-        ):
-            for number, (name, values) in enumerate(found.items()):
-                panel.plot(
-                    grid.heights * 1e6,
-                    values,
-                    color=style.LINES[number],
-                    marker=style.MARKERS[number],
-                    linestyle=style.DASHES[number],
-                    label=name,
-                )
+        figure = style.new_figure(style.PAGE_WIDTH, 6.4)
+        panels = figure.subplots(2, 2)
+        found = ({name: error for name, (error, _) in detector.items()}, camera)
+        titles = ("(a) one detector", "(b) camera, pixels of 8 µm")
+        for panel, errors, grid, title in zip(panels[0], found, grids, titles, strict=True):
+            for number, (name, values) in enumerate(errors.items()):
+                panel.plot(grid.heights * 1e6, values, label=name, **line(number))
             panel.set_xlabel("height above the diamond (µm)")
-            panel.set_ylabel("error over expected spread")
-            panel.set_ylim(0, 1.05)
             panel.set_title(title, loc="left")
-            panel.legend(loc="best", fontsize=8)
+        for panel, (name, result) in zip(panels[1], tables.items(), strict=True):
+            shots = result["shots"] * np.array(result["factors"])
+            means, spreads = np.array(result["separate"]).T
+            panel.errorbar(shots, means, spreads, label="k and q chosen separately", **line(0))
+            panel.plot(
+                shots[:1], [result["together"]], label="together", **line(1) | {"linestyle": "none"}
+            )
+            panel.axhline(result["together"], color=style.FAINT, linewidth=0.8)
+            panel.set_xscale("log", base=2)
+            panel.set_xticks(shots, [str(n) for n in shots])
+            panel.set_xlabel("shots")
+            panel.set_title(f"(c) {name}", loc="left")
+        for panel in panels.ravel():
+            panel.set_ylabel("error over expected spread")
+            panel.set_ylim(0, 1.3 * panel.get_ylim()[1])
+            panel.legend(loc="upper left", fontsize=8)
     figures.save(figure, path)
+
+
+def line(number: int) -> dict[str, object]:
+    """Colour, marker and dashes of the n-th line."""
+    return {
+        "color": style.LINES[number],
+        "marker": style.MARKERS[number],
+        "linestyle": style.DASHES[number],
+    }
 
 
 def main() -> None:
@@ -175,37 +249,67 @@ def main() -> None:
     parser.add_argument("--json", action="store_true")
     parser.add_argument("--figure")
     options = parser.parse_args()
-    error, width, grid = one_detector()
-    heights = [f"{z * 1e6:g} µm" for z in grid.heights]
-    print("(a) one detector, 800 shots, no gradient along z: error over spread, axial width in µm")
+    scene, coarse = detector_scene(), camera_scene()
+    heights = [f"{z * 1e6:g} µm" for z in scene.grid.heights]
+    print("(a) one detector, 800 shots: error over spread per height, axial width in µm per height")
+    detector = one_detector(scene)
     table(
-        [[n, *error[n], "|", *width[n]] for n in error],
-        ["sensor wavevectors", *heights, "|", *heights],
+        [[name, *error, "|", *width] for name, (error, width) in detector.items()],
+        ["encoding", *heights, "|", *heights],
     )
-    camera, camera_grid = coarse_camera()
-    print("(b) camera, pixels of 8 µm on voxels of 2 µm, 48 shots")
+    camera = coarse_camera(coarse)
+    print("(b) camera, pixels of 8 µm on voxels of 2 µm, optics to 0.7 rad/µm, 48 shots")
     table(
-        [[n, *camera[n]] for n in camera],
-        ["encoding", *(f"{z * 1e6:g} µm" for z in camera_grid.heights)],
+        [[name, *errors] for name, errors in camera.items()],
+        ["encoding", *(f"{z * 1e6:g} µm" for z in coarse.grid.heights)],
     )
-    tables = correlated()
-    print("(c) one detector, 400 shots: k and q chosen together or separately")
-    table([[n, *tables[n]] for n in tables], ["tables", *heights])
+    tables = {
+        "one detector": correlated(scene, detector_kinds(scene.grid, RINGS, 8), 400),
+        "camera, pixels of 8 µm": correlated(coarse, camera_kinds_with(coarse, True), 48),
+    }
+    print(
+        "(c) k and q chosen together, q dealt anew at the same k + q, or k and q paired at random"
+    )
+    table(
+        [
+            [
+                n,
+                r["shots"],
+                r["together"],
+                r["same sum"],
+                *(m for m, _ in r["separate"]),
+                r["needed"],
+            ]
+            for n, r in tables.items()
+        ],
+        [
+            "scene",
+            "shots",
+            "together",
+            "same k + q",
+            *(f"apart x {n}" for n in (1, 2, 4, 8)),
+            "shots needed x",
+        ],
+    )
     if options.figure:
-        draw(options.figure, error, camera, (grid, camera_grid))
-    names = list(error)
-    single = min(float(np.sqrt((error[n] ** 2).mean())) for n in names[:2])
+        draw(options.figure, detector, camera, tables, (scene.grid, coarse.grid))
+    (one, width), (axial, _), (several, widths) = detector.values()
     emit(
         {
-            "one_detector_error_several_q_over_best_single_q": float(
-                np.sqrt((error[names[2]] ** 2).mean()) / single
-            ),
-            "camera_error_both_over_nuclear_only": float(
-                camera["both gradients"].mean() / camera["nuclear gradient only"].mean()
-            ),
-            "error_together_over_separately": float(
-                tables["together"].mean() / tables["separately"].mean()
-            ),
+            "one_detector_error_several_q_over_best_single_q": total(several) / total(one),
+            "one_detector_error_several_q_over_z_gradient": total(several) / total(axial),
+            "one_detector_axial_width_several_over_single": float(np.mean(widths / width)),
+            "camera_error_sensor_only_over_neither": total(camera["sensor gradient only"])
+            / total(camera["neither gradient"]),
+            "camera_error_both_over_nuclear_only": total(camera["both gradients"])
+            / total(camera["nuclear gradient only"]),
+            "error_together_over_separately": {
+                name: r["together"] / r["separate"][0][0] for name, r in tables.items()
+            },
+            "error_together_over_same_sum": {
+                name: r["together"] / r["same sum"] for name, r in tables.items()
+            },
+            "shots_separate_over_together": {name: r["needed"] for name, r in tables.items()},
         }
     )
 

@@ -42,11 +42,7 @@ def test_errors_over_simulated_records_are_those_of_the_bound():
 
     Its covariance is ½ C G C with C = (G + ½Γ⁻¹)⁻¹ (Kay 1993); within 5 %.
     """
-    setting, protocol, sample = (
-        planning.experiment(species=planning.SPECIES),
-        planning.table(),
-        None,
-    )
+    setting, protocol = planning.experiment(species=planning.SPECIES), planning.table(20)
     sample = specimen()
     bound = Bound.of(setting, protocol)
     inverse = np.linalg.inv(bound._with_prior())
