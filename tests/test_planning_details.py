@@ -15,7 +15,7 @@ from recon.forward import BlockQuadratic, ForwardOperator, accumulate
 from recon.forward.block_matrix import BlockMatrix
 from recon.grid import Grid
 from recon.planning.bound import Bound, Expectation, Experiment
-from recon.planning.candidates import Candidates, camera_kinds
+from recon.planning.candidates import Candidates, axial_wavenumbers, camera_kinds
 from recon.planning.choice import Budget, Choice, MeanError, WorstError
 from recon.planning.feasibility import Feasibility
 from recon.planning.limits import Limits, Loss, excitations_of
@@ -168,6 +168,15 @@ def test_exchange_keeps_to_the_time_and_never_makes_worse(criterion):
     )
     assert swapped.value <= plain.value * (1 + 1e-6)
     assert sum(candidates.seconds[pair] for pair in swapped.pairs) <= 0.03 * (1 + 1e-6)
+
+
+def test_axial_wavenumbers_by_hand():
+    """Three planes of 4 µm: steps of π/12, up to π/4; without a z gradient, none."""
+    made = instrument()
+    found = axial_wavenumbers(planning.GRID, made)
+    np.testing.assert_allclose(found, np.arange(-3, 4) * np.pi / 12, rtol=1e-9)
+    still = made.gradients.model_copy(update={"nuclear_strength_mT_per_m": (1.0, 1.0, 0.0)})
+    assert axial_wavenumbers(planning.GRID, made.model_copy(update={"gradients": still})) == (0.0,)
 
 
 def test_region_counts_by_its_planes():

@@ -15,7 +15,13 @@ from recon.cli.common import progress_line
 from recon.errors import InputError
 from recon.instrument import Instrument, OneDetector
 from recon.planning.bound import Expectation, Experiment
-from recon.planning.candidates import Candidates, Kind, camera_kinds, detector_kinds
+from recon.planning.candidates import (
+    Candidates,
+    Kind,
+    axial_wavenumbers,
+    camera_kinds,
+    detector_kinds,
+)
 from recon.planning.choice import Budget, Choice, Criterion, MeanError, WorstError
 from recon.planning.feasibility import Feasibility
 from recon.planning.limits import Limits, Loss, excitations_of
@@ -39,7 +45,10 @@ def settings(command: Callable[..., None]) -> Callable[..., None]:
         click.option("--exchanges", type=click.IntRange(0), default=8, show_default=True),
         click.option("--axis", type=click.IntRange(1, 4), multiple=True, default=(1,)),
         click.option(
-            "--axial-rad-per-um", type=float, multiple=True, default=(-0.3, -0.15, 0.0, 0.15, 0.3)
+            "--axial-rad-per-um",
+            type=float,
+            multiple=True,
+            help="k_z to choose from; by default what the planes need, as far as it reaches.",
         ),
         click.option(
             "--sensor-rad-per-um", type=float, multiple=True, default=(0.05, 0.1, 0.2),
@@ -146,7 +155,8 @@ class Options:
         if isinstance(experiment.instrument.detector, OneDetector):
             plain = detector_kinds(experiment.grid, self.sensor_rad_per_um, axes=self.axis)
             return tuple(replace(kind, evolution_s=t) for kind in plain for t in evolutions)
-        return camera_kinds(self.axis, self.axial_rad_per_um, evolution_s=evolutions)
+        axial = self.axial_rad_per_um or axial_wavenumbers(experiment.grid, experiment.instrument)
+        return camera_kinds(self.axis, axial, evolution_s=evolutions)
 
     def budget(self, excitations: int) -> Budget:
         """Shots and seconds there are; a hyperpolarised train has so many fills."""

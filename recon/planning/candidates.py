@@ -170,6 +170,15 @@ def camera_kinds(
     )
 
 
+def axial_wavenumbers(grid: Grid, instrument: Instrument) -> tuple[float, ...]:
+    """k_z in steps of half a lattice step, π/(nz dz), up to a plane's π/dz or the limit, rad/µm."""
+    nz, edge = grid.shape[0], grid.voxel[0]
+    step = np.pi / (nz * edge)
+    most = min(np.pi / edge, float(instrument.nuclear_wavevector_limit[2]))
+    count = int(np.floor(most / step * (1 + 1e-9)))
+    return tuple(float(wave) * 1e-6 for wave in np.arange(-count, count + 1) * step)
+
+
 def detector_kinds(
     grid: Grid,
     wavenumber_rad_per_um: tuple[float, ...],
