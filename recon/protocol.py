@@ -68,7 +68,11 @@ class Protocol:
     evolution_time
         Time t1 that a shot evolves before its first sample, on top of `sample_times`, seconds,
         float64 (shots,), not negative; zeros if not given. An indirect spectral axis is a table of
-        (k, q, t1), and any part of it may be left out.
+        (k, q, t1), and any part of it may be left out. Where the decay is listened to after the
+        encoding it is time during which the wound pattern waits.
+    encoding_duration
+        Length of the nuclear gradient's pulse, seconds, the same for all shots. Sample times count
+        it in. 0 neglects what diffuses during the pulse.
     spectral_axis
         How the spectral axis is sampled.
     reference_shift_ppm
@@ -89,6 +93,7 @@ class Protocol:
     clock_time: NDArray[np.float64]
     sample_times: NDArray[np.float64]
     evolution_time: NDArray[np.float64] = field(default_factory=lambda: np.zeros(0))
+    encoding_duration: float = 0.0
     spectral_axis: SpectralAxis = SpectralAxis.LISTEN_AFTER_ENCODING
     reference_shift_ppm: float = REFERENCE_SHIFT_PPM
 
@@ -148,6 +153,14 @@ class Protocol:
         times = self.sample_times
         if times.size == 0 or times[0] < 0 or (np.diff(times) <= 0).any():
             raise InputError("sample_times must ascend from 0 s or later", KIND)
+        if not 0 <= self.encoding_duration < np.inf:
+            raise InputError("encoding_duration must not be negative", KIND)
+        if self.listens and times[0] + self.evolution_time.min() < self.encoding_duration:
+            raise InputError(
+                f"the first sample at {times[0] * 1e3:g} ms lies within the encoding pulse",
+                KIND,
+                "begin sampling after it",
+            )
         if not isinstance(self.spectral_axis, SpectralAxis):
             raise InputError(f"spectral_axis {self.spectral_axis!r} is not a SpectralAxis", KIND)
         if not np.isfinite(self.reference_shift_ppm):
@@ -198,6 +211,20 @@ class Protocol:
         """The different evolution times, ascending, and which of them each shot has."""
         times, place = np.unique(self.evolution_time, return_inverse=True)
         return times, place
+
+    @property
+    def listens(self) -> bool:
+        """The decay is listened to after the encoding, while the pattern diffuses away."""
+        return self.spectral_axis is SpectralAxis.LISTEN_AFTER_ENCODING
+
+    def wound_times(self, evolution: float = 0.0) -> NDArray[np.float64]:
+        """How long the pattern has been wound when it is sampled, after `evolution`, (times,), s.
+
+        Nothing where the shift evolves before the encoding.
+        """
+        if not self.listens:
+            return np.zeros_like(self.sample_times)
+        return self.sample_times + evolution - self.encoding_duration
 
     def digest(self) -> str:
         """SHA-256 of the contents, hexadecimal; equal tables have equal digests."""

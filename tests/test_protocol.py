@@ -27,8 +27,9 @@ def test_digest_changes_with_every_field():
     changed = [
         replace(one, **{f.name: getattr(one, f.name) + 1})
         for f in fields(Protocol)
-        if f.name not in ("spectral_axis", "sensing_axis")
+        if f.name not in ("spectral_axis", "sensing_axis", "encoding_duration")
     ]
+    changed.append(replace(one, sample_times=one.sample_times + 1, encoding_duration=0.5))
     changed.append(replace(one, sensing_axis=one.sensing_axis % 4 + 1))
     changed.append(replace(one, spectral_axis=SpectralAxis.EVOLVE_THEN_ENCODE))
     assert len({table.digest() for table in [one, *changed]}) == len(changed) + 1

@@ -11,10 +11,16 @@ from __future__ import annotations
 import numpy as np
 from numpy.typing import ArrayLike, NDArray
 
+from recon.physics.dipole import decay_integral
+
 FloatArray = NDArray[np.floating]
+ComplexArray = NDArray[np.complexfloating]
 
 ENOUGH = 40.0
 """Modes whose decay exponent exceeds this contribute less than 1e-17."""
+
+MODES = 256
+"""Modes kept where a wound pattern is seen; what later ones lose falls as 1/MODES²."""
 
 
 def lateral_decay(wavenumber: ArrayLike, diffusion: float, time: ArrayLike) -> FloatArray:
@@ -45,7 +51,7 @@ def slab_propagator(count: int, thickness: float, diffusion: float, time: float)
     if diffusion * time == 0:
         return np.eye(count)
     edge = thickness / count
-    if np.sqrt(2 * diffusion * time) < 0.5 * edge:
+    if np.sqrt(2 * diffusion * time) < 0.1 * edge:
         return _by_reflection(count, edge, np.sqrt(2 * diffusion * time))
     rate = diffusion * time * (np.pi / thickness) ** 2
     modes = np.arange(1, int(np.ceil(np.sqrt(ENOUGH / rate))) + 2)
@@ -59,7 +65,7 @@ def _by_reflection(count: int, edge: float, spread: float) -> FloatArray:
     """Gaussian steps much shorter than a layer: only neighbours exchange, walls reflect.
 
     The share of an even layer that a normal step of standard deviation σ carries over an edge is
-    σ/(√(2π) · edge), apart from steps longer than the layer (below 1e-3 of it here).
+    σ/(√(2π) · edge), apart from steps longer than the layer, which are ten σ here.
     """
     crossing = spread / (np.sqrt(2 * np.pi) * edge)
     matrix = np.eye(count)
@@ -68,6 +74,68 @@ def _by_reflection(count: int, edge: float, spread: float) -> FloatArray:
         matrix[low + 1, low + 1] -= crossing
         matrix[low, low + 1] = matrix[low + 1, low] = crossing
     return matrix
+
+
+def mode_overlap(
+    decay: ArrayLike, modes: FloatArray, low: ArrayLike, length: float, thickness: float
+) -> ComplexArray:
+    """∫ exp(−s z) cos(nπz/a) dz over `length` from `low`, for complex s, broadcast together."""
+    turn = 1j * np.pi / thickness * modes
+    low = np.asarray(low, float)
+    halves = [
+        np.exp(-exponent * low) * decay_integral(exponent, length)
+        for exponent in (np.asarray(decay, complex) + turn, np.asarray(decay, complex) - turn)
+    ]
+    return 0.5 * (halves[0] + halves[1])
+
+
+def wound_layers(
+    wavenumber: FloatArray,
+    count: int,
+    thickness: float,
+    axial_wavenumber: float,
+    spread: FloatArray,
+    standing: bool = False,
+) -> ComplexArray:
+    """What is seen of the layers of a closed slab once their wound pattern has spread along z.
+
+    With p(z, z'; Dt) the slab's propagator over the heights 0 … a, layer i seen through exp(−κz)::
+
+        A_i(κ, t) = ∫∫ exp(−κz) p(z, z'; Dt) exp(i k_z z') dz' dz
+
+    with z' in layer i and z anywhere (molecules carry amount and phase away), or, `standing`, z in
+    layer i and z' anywhere (amounts stay as they are, molecules change places and mix phases).
+
+    Parameters
+    ----------
+    wavenumber
+        κ, (κs,), rad/m.
+    spread
+        D t, (times,), m².
+
+    Returns
+    -------
+    (times, layers, κs), metres.
+    """
+    edge = thickness / count
+    lower = np.arange(count) * edge
+    along = np.asarray(wavenumber - 1j * axial_wavenumber, np.complex128)
+    start = np.exp(-np.outer(lower, along)) * decay_integral(along, edge)
+    modes = np.arange(MODES, dtype=float)
+    seen_through = np.asarray(wavenumber, np.complex128)
+    wound_by = np.array([-1j * axial_wavenumber])
+    layer, slab = (seen_through, wound_by) if standing else (wound_by, seen_through)
+    inside = mode_overlap(layer[:, None, None], modes[:, None], lower, edge, thickness)
+    whole = mode_overlap(slab[:, None], modes, 0.0, thickness, thickness)
+    whole = whole * (np.where(modes == 0, 1, 2) / thickness)
+    rate = np.outer(spread, (modes * np.pi / thickness) ** 2)
+    seen = np.empty((len(spread), count, len(wavenumber)), complex)
+    for place, exponent in enumerate(rate):
+        late = exponent[-1] > ENOUGH
+        left = np.exp(-exponent) if late else np.expm1(-exponent)
+        product = np.matmul((whole * left)[:, None], inside)[:, 0]
+        seen[place] = product.T if late else start + product.T
+    return seen
 
 
 def restricted_signal(
@@ -98,3 +166,22 @@ def pulse_attenuation(wavenumber: ArrayLike, diffusion: float, pulse: float) -> 
     The wavenumber grows linearly, so ∫ u² dt = k² δ/3.
     """
     return np.exp(-diffusion * np.asarray(wavenumber, float) ** 2 * pulse / 3)
+
+
+def pulse_attenuation_of_total(
+    total: tuple[FloatArray, FloatArray], wound: ArrayLike, diffusion: float, pulse: float
+) -> FloatArray:
+    """The same for a map that spreads too, by its total wavevector u = κ' + k after the pulse.
+
+    During the pulse the total is u − k (1 − τ), τ from 0 to 1: exp(−D δ (u² − u·k + k²/3)).
+
+    Parameters
+    ----------
+    total
+        u along (y, x), broadcast together.
+    wound
+        k along (y, x).
+    """
+    (u_y, u_x), (k_y, k_x) = total, np.asarray(wound, float)
+    mean = u_y**2 + u_x**2 - (u_y * k_y + u_x * k_x) + (k_y**2 + k_x**2) / 3
+    return np.exp(-diffusion * pulse * mean)

@@ -85,16 +85,34 @@ def field_kernel(
     """
     along_y = np.asarray(wavenumber_y, dtype=np.float64)[:, None]
     along_x = np.asarray(wavenumber_x, dtype=np.float64)[None, :]
+    lateral = surface_kernel(
+        along_y, along_x, sensing_direction, magnetisation_direction, depth, thickness
+    )
+    decay = np.hypot(along_y, along_x) - 1j * axial_wavenumber
+    lower = np.asarray(heights, dtype=np.float64)[:, None, None] - voxel_height / 2
+    sheet = decay_integral(decay, voxel_height)
+    return np.asarray((lateral * sheet) * np.exp(-decay * lower), dtype=np.complex128)
+
+
+def surface_kernel(
+    along_y: FloatArray,
+    along_x: FloatArray,
+    sensing_direction: ArrayLike,
+    magnetisation_direction: ArrayLike,
+    depth: float,
+    thickness: float,
+) -> ComplexArray:
+    """Layer-averaged field of a sheet of unit magnetisation per area on the face, T per A.
+
+    (μ0/2) (n·v)(m·v)/κ times the layer average of `field_kernel`; 0 at κ = 0. Magnetisation at
+    height z adds exp(−κz). The components of the wavevector broadcast together.
+    """
     wavenumber = np.hypot(along_y, along_x)
     lateral = _along(sensing_direction, along_y, along_x, wavenumber)
     lateral = lateral * _along(magnetisation_direction, along_y, along_x, wavenumber)
     present = wavenumber > 0
     lateral = np.divide(lateral, wavenumber, out=np.zeros_like(lateral), where=present)
-    lateral *= 0.5 * constants.mu_0 * _layer_average(wavenumber, depth, thickness)
-    decay = wavenumber - 1j * axial_wavenumber
-    sheet = _decay_integral(decay, voxel_height)
-    lower = np.asarray(heights, dtype=np.float64)[:, None, None] - voxel_height / 2
-    return np.asarray((lateral * sheet) * np.exp(-decay * lower), dtype=np.complex128)
+    return lateral * (0.5 * constants.mu_0 * _layer_average(wavenumber, depth, thickness))
 
 
 def lateral_footprint(wavenumber: ArrayLike, edge: float) -> FloatArray:
@@ -134,7 +152,7 @@ def _layer_average(wavenumber: FloatArray, depth: float, thickness: float) -> Fl
     return np.asarray(np.exp(-wavenumber * depth) * average)
 
 
-def _decay_integral(decay: ComplexArray, length: float) -> ComplexArray:
+def decay_integral(decay: ComplexArray, length: float) -> ComplexArray:
     """∫ exp(−s z) dz over 0 … length, for complex s; the length itself at s = 0."""
     return np.divide(
         -np.expm1(-decay * length), decay, out=np.full_like(decay, length), where=decay != 0
