@@ -59,8 +59,7 @@ class DiffusingOperator:
         tables, base = self.responses.tables, self.model.base
         for shot, sample in enumerate(samples):
             *_, rows, columns = self.responses.places(shot)
-            response = self.responses.of(shot)
-            field = np.einsum("tczyx,czyx->tyx", response, spectrum[:, :, rows, columns])
+            field = self.responses.of(shot).fields(spectrum[:, :, rows, columns])
             if base.is_one_detector:
                 sample[...] = field * (base.encoding.amplitude[shot] * tables.gain)
                 continue
@@ -91,10 +90,8 @@ class DiffusingOperator:
             for shot, sample in zip(range(shots.start, shots.stop), samples, strict=True):
                 factor = 1.0 if weight is None else float(weight[shot])
                 *_, rows, columns = self.responses.places(shot)
-                response = self.responses.of(shot)
-                field = self._field(shot, sample, factor)
                 seen = unwrapped[:, :, rows, columns]
-                seen += np.einsum("tczyx,tyx->czyx", response.conj(), field)
+                seen += self.responses.of(shot).back(self._field(shot, sample, factor))
         unwrapped *= self.footprint
         return fold(unwrapped, (ny, nx))
 
@@ -133,13 +130,12 @@ def joint_blocks(operator: DiffusingOperator) -> tuple[Layout, ComplexArray]:
     for shot in range(len(model.group)):
         groups.setdefault(operator.responses.key(shot), []).append(shot)
     for shots in groups.values():
-        response = operator.responses.of(shots[0]) * np.float32(unit)
-        seen = response.reshape(len(response), size, *response.shape[3:]).transpose(2, 3, 0, 1)
-        product = np.matmul(seen.conj().swapaxes(-1, -2), seen)
+        product = operator.responses.of(shots[0]).products(unit)
         for shot in shots:
             *_, rows, columns = operator.responses.places(shot)
             place = total[rows, columns]
-            place += product * np.float32(strength[shot] / unit**2)
+            gram = operator.responses.of(shot).gram()
+            place += product * np.asarray(gram * (strength[shot] / unit**2), np.complex64)
     total *= (operator.footprint**2).astype(np.float32)[:, :, None, None]
     return layout, fold(total.transpose(2, 3, 0, 1), (ny, nx))
 
@@ -154,7 +150,7 @@ def _aliased(operator: DiffusingOperator, layout: Layout) -> ComplexArray:
         rows, columns = operator.responses.tables.windows[shot]
         gain = operator.responses.tables.gain * weight
         scale = np.sqrt(gain) * np.abs(base.encoding.amplitude[shot])
-        seen = operator.responses.of(shot) * (operator.footprint[rows, columns] * scale)
+        seen = operator.responses.of(shot).whole() * (operator.footprint[rows, columns] * scale)
         shift = -(np.array([ny // 2, nx // 2]) + base.encoding.nuclear[shot])
         turned = np.roll(seen.astype(np.complex64), shift, axis=(-2, -1))
         gathered = np.stack([layout.gather(one) for one in turned]).transpose(2, 3, 0, 1)

@@ -117,6 +117,57 @@ class DiffusingModel:
         return len(self.group) * self.times * int(np.prod(self.base.channels))
 
 
+@dataclass(frozen=True, eq=False)
+class Response:
+    """R of one shot: the product of a course and a kernel.
+
+    Attributes
+    ----------
+    course
+        (times, components); ones where the kernel holds it.
+    kernel
+        Detector transfer included, (1 or times, components, nz, ny, nx); 1 where all times see the
+        pattern alike. (…, 1, 1) for one detector.
+    """
+
+    course: ComplexArray
+    kernel: ComplexArray
+
+    def fields(self, seen: ComplexArray) -> ComplexArray:
+        """(components, nz, ny, nx) of an object's spectrum to (times, ny, nx)."""
+        if len(self.kernel) > 1:
+            return np.asarray(np.einsum("tczyx,czyx->tyx", self.kernel, seen))
+        return np.asarray(np.tensordot(self.course, (self.kernel[0] * seen).sum(axis=1), 1))
+
+    def back(self, fields: ComplexArray) -> ComplexArray:
+        """The adjoint of `fields`."""
+        if len(self.kernel) > 1:
+            return np.asarray(np.einsum("tczyx,tyx->czyx", self.kernel.conj(), fields))
+        mixed = np.tensordot(self.course.conj().T, fields, 1)
+        return np.asarray(self.kernel[0].conj() * mixed[:, None])
+
+    def products(self, unit: float) -> ComplexArray:
+        """Σ_t conj(R_a) R_b times unit², (ny, nx, a, b), a and b running over components and z.
+
+        Without the course where the kernel is the same at all times: see `gram`.
+        """
+        rows = self.kernel.reshape(len(self.kernel), -1, *self.kernel.shape[3:])
+        rows = (rows * np.float32(unit)).transpose(2, 3, 0, 1)
+        return np.asarray(np.matmul(rows.conj().swapaxes(-1, -2), rows))
+
+    def gram(self) -> ComplexArray | float:
+        """What `products` is to be multiplied with, (a, b), or 1."""
+        if len(self.kernel) > 1:
+            return 1.0
+        nz = self.kernel.shape[2]
+        gram = self.course.conj().T @ self.course
+        return np.asarray(np.kron(gram, np.ones((nz, nz))), np.complex64)
+
+    def whole(self) -> ComplexArray:
+        """R, (times, components, nz, ny, nx)."""
+        return np.asarray(self.kernel * self.course[:, :, None, None, None])
+
+
 class Responses:
     """R of every shot over the band, or at the one frequency that one detector sees."""
 
@@ -126,26 +177,46 @@ class Responses:
         self._kept: dict[object, ComplexArray] = {}
 
     def key(self, shot: int) -> tuple[object, ...]:
-        """Shots of equal key have equal responses, detector transfer included."""
+        """Shots of equal key have equal kernels."""
         model, encoding = self.model, self.model.base.encoding
-        knows = model.spreading.knows_wound(model.pulse)
+        apart = model.spreading.standing and self._alike(shot)
+        knows = model.spreading.knows_wound(model.pulse) and not apart
         wound = tuple(encoding.nuclear[shot]) if knows else ()
         return (*self.tables.keys[shot], int(model.group[shot]), *wound)
 
-    def of(self, shot: int) -> ComplexArray:
-        """R times the detector transfer, (times, components, nz, ny, nx) for a camera.
+    def of(self, shot: int) -> Response:
+        """The response; the kernel is kept for shots to come."""
+        model = self.model
+        course = np.ones((model.times, model.components), self.dtype)
+        if self._alike(shot):
+            course = model.bases[model.group[shot]].astype(self.dtype)
+            if model.spreading.standing:
+                left = [self._left(shot, place)[:, 0, 0] for place in range(model.components)]
+                course = (course * np.stack(left, axis=1)).astype(self.dtype)
+        return Response(course, self._keep(self.key(shot), lambda: self._kernel(shot)))
 
-        (times, components, nz, 1, 1) for one detector, whose transfer is 1.
-        """
-        return self._keep(("response", *self.key(shot)), lambda: self._evaluate(shot))
+    def _alike(self, shot: int) -> bool:
+        """All samples of the shot see the layers alike."""
+        times = self.model.wound_times[self.model.group[shot]]
+        still = self.model.spreading.standing and self.model.base.encoding.axial[shot] == 0
+        return still or bool(np.all(times == times[0]))
 
-    def _evaluate(self, shot: int) -> ComplexArray:
+    def _left(self, shot: int, place: int) -> FloatArray:
+        """What diffusion leaves of one component's lateral wavevectors and pulse."""
+        model, encoding = self.model, self.model.base.encoding
+        rows, columns, _, _ = self.places(shot)
+        wound = encoding.nuclear[shot] * np.array(model.base.grid.lattice_step)
+        diffusion, times = float(model.diffusion[place]), model.wound_times[model.group[shot]]
+        sides = self._band(rows, columns)
+        left = model.spreading.lateral(sides, wound, diffusion, times, model.pulse)
+        return left * pulse_attenuation(float(encoding.axial[shot]), diffusion, model.pulse)
+
+    def _kernel(self, shot: int) -> ComplexArray:
         model, base = self.model, self.model.base
         encoding, instrument = base.encoding, base.instrument
         rows, columns, _, _ = self.places(shot)
-        sides = self._band(rows, columns)
         sheet = surface_kernel(
-            *sides,
+            *self._band(rows, columns),
             instrument.sensing_directions[encoding.sensing_axis[shot]],
             magnetisation_direction(instrument.bias_direction),
             instrument.depth,
@@ -154,17 +225,18 @@ class Responses:
         if not base.is_one_detector:
             sheet = sheet * self.tables.transfer(shot)
         group, axial = int(model.group[shot]), float(encoding.axial[shot])
-        step = np.array(base.grid.lattice_step)
-        times, response = model.wound_times[group], []
+        parts, alike = [], self._alike(shot)
         for place, diffusion in enumerate(model.diffusion):
-            left = model.spreading.lateral(
-                sides, encoding.nuclear[shot] * step, float(diffusion), times, model.pulse
-            )
-            left = left * pulse_attenuation(axial, float(diffusion), model.pulse)
-            course = (sheet * left * model.bases[group, :, place, None, None]).astype(self.dtype)
             layers = self._layers(rows, columns, axial, float(diffusion), group)
-            response.append(course[:, None] * layers)
-        return np.stack(response, axis=1)
+            course = sheet[None]
+            if not (alike and model.spreading.standing):
+                course = course * self._left(shot, place)
+            if alike:
+                course, layers = course[:1], layers[:1]
+            else:
+                course = course * model.bases[group, :, place, None, None]
+            parts.append(course.astype(self.dtype)[:, None] * layers)
+        return np.stack(parts, axis=1)
 
     def places(self, shot: int) -> tuple[slice, slice, slice, slice]:
         """Where a shot looks: rows, columns of the band, then of the unwrapped spectrum."""
