@@ -56,8 +56,8 @@ def apparatus(one_detector: bool = False, pixel_um: float = 4.0):
     return type(made).model_validate(data | detector)
 
 
-def experiment(one_detector=False, species=SPECIES[:1], spread=20.0, pixel_um=4.0):
-    expectation = Expectation((spread,) * len(species), 12.0)
+def experiment(one_detector=False, species=SPECIES[:1], spread=20.0, pixel_um=4.0, axial=0.0):
+    expectation = Expectation((spread,) * len(species), 12.0, axial)
     return Experiment(apparatus(one_detector, pixel_um), GRID, species, expectation)
 
 
@@ -65,10 +65,15 @@ def table(shots: int = 40, axial: float = 0.3) -> Protocol:
     return UniformRandom(shots=shots, axial_bound_rad_per_um=axial, seed=2).protocol(GRID, TIMES)
 
 
-@pytest.mark.parametrize("species", [SPECIES[:1], SPECIES], ids=["one", "two"])
-def test_bound_agrees_with_monte_carlo(species):
+@pytest.mark.parametrize(
+    "species, axial", [(SPECIES[:1], 0.0), (SPECIES, 0.0), (SPECIES[:1], 20.0)]
+)
+def test_bound_agrees_with_monte_carlo(species, axial):
     """Random objects of the prior, noisy records, the linear estimate: within 5 % per depth."""
     setting, protocol = experiment(species=species), table()
+    expected = replace(setting.expectation, axial_feature_um=axial)
+    setting = replace(setting, expectation=expected)
+    along = np.linalg.cholesky(expected.axial_covariance(GRID))
     bound = Bound.of(setting, protocol)
     model = setting.model(protocol)
     operator, unit = ForwardOperator(model), bound.unit
@@ -80,6 +85,7 @@ def test_bound_agrees_with_monte_carlo(species):
     total, count = 0.0, 60
     for _ in range(count):
         white = rng.standard_normal((len(unit), *GRID.shape))
+        white = np.einsum("zw,swyx->szyx", along, white)
         x = np.fft.ifft2(np.fft.fft2(white) * root).real
         y = operator.apply((x * unit[:, None, None, None]).astype(np.complex64))
         y = y + sigma * rng.standard_normal((*y.shape, 2)).view(complex)[..., 0]
@@ -142,6 +148,10 @@ CASES = {
     "t1": (
         lambda: experiment(species=SPECIES),
         (Kind(1, 0.0, (0, 0), 1e-3), Kind(1, 2e5, (0, 0), 9e-3), Kind(1, 0.0, (0, 0), 4e-3)),
+    ),
+    "correlated planes": (
+        lambda: experiment(pixel_um=8.0, axial=20.0),
+        (Kind(1, 0.0, (1, 0)), Kind(1, 2e5)),
     ),
     "t1, one detector": (
         lambda: experiment(True, SPECIES),

@@ -55,6 +55,12 @@ def settings(command: Callable[..., None]) -> Callable[..., None]:
             help="One detector: |q| to choose from.",
         ),
         click.option("--feature-um", default=20.0, help="Of the structure expected.", **NUMBER),
+        click.option(
+            "--axial-feature-um",
+            type=float,
+            default=None,
+            help="The same along z; as across by default, 0 for independent planes.",
+        ),
         click.option("--samples", type=click.IntRange(1), default=32, show_default=True),
         click.option("--sample-interval-ms", default=8.0, **NUMBER),
         click.option("--listen", is_flag=True, help="Record after the gradient."),
@@ -94,6 +100,7 @@ class Options:
     axial_rad_per_um: tuple[float, ...]
     sensor_rad_per_um: tuple[float, ...]
     feature_um: float
+    axial_feature_um: float | None
     samples: int
     sample_interval_ms: float
     listen: bool
@@ -125,7 +132,8 @@ class Options:
         if self.ancilla_gain is not None:
             readout = AncillaReadout(self.ancilla_gain, self.ancilla_dead_time_us)
             gain = readout.noise_gain(apparatus.readout.sensing_time)
-        expectation = Expectation(tuple(float(s) for s in spread), self.feature_um)
+        axial = self.feature_um if self.axial_feature_um is None else self.axial_feature_um
+        expectation = Expectation(tuple(float(s) for s in spread), self.feature_um, axial)
         return Experiment(apparatus, sample.grid, sample.species, expectation, gain)
 
     @property

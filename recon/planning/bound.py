@@ -48,17 +48,22 @@ class Expectation:
         Standard deviation of each species' amount over voxels, (species,), mM.
     feature_um
         Size of the structure: lateral spectrum ∝ 1/(1 + (κ · feature/2)²)^{3/2}, the exponential
-        covariance; planes are taken as independent.
+        covariance.
+    axial_feature_um
+        The same along z: covariance exp(−2|z − z'|/feature); 0 for independent planes.
     """
 
     spread_mM: tuple[float, ...]  # noqa: N815
     feature_um: float = 10.0
+    axial_feature_um: float = 0.0
 
     def __post_init__(self) -> None:
         if not self.spread_mM or not min(self.spread_mM) > 0:
             raise InputError("spread_mM needs positive numbers", "expectation")
         if not self.feature_um > 0:
             raise InputError("feature_um must be positive", "expectation")
+        if not self.axial_feature_um >= 0:
+            raise InputError("axial_feature_um must not be negative", "expectation")
 
     def spectrum(self, grid: Grid) -> FloatArray:
         """Shape of the lateral spectrum, mean 1 over the lattice, (ny, nx), FFT order."""
@@ -69,6 +74,19 @@ class Expectation:
         squared = wave_y[:, None] ** 2 + wave_x**2
         shape = (1 + squared * (self.feature_um * 0.5e-6) ** 2) ** -1.5
         return shape / shape.mean()
+
+    def axial_covariance(self, grid: Grid) -> FloatArray:
+        """Between planes, unit diagonal, (nz, nz)."""
+        heights = grid.heights
+        if self.axial_feature_um == 0:
+            return np.eye(len(heights))
+        distance = np.abs(heights[:, None] - heights)
+        return np.exp(-2 * distance / (self.axial_feature_um * 1e-6))
+
+    def axial_precision(self, grid: Grid, size: int) -> FloatArray:
+        """Its inverse, once for every component and alias of a block, (size, size)."""
+        inverse = np.linalg.inv(self.axial_covariance(grid))
+        return np.kron(np.eye(size // grid.shape[0]), inverse)
 
 
 @dataclass(frozen=True, eq=False)
@@ -146,7 +164,10 @@ class Bound:
 
     @cached_property
     def prior(self) -> FloatArray:
-        """½ Γ⁻¹ in scaled units: a diagonal (q, blocks)."""
+        """½ over the spectrum, in scaled units, in block order (q, blocks).
+
+        ½ Γ⁻¹ is this times the inverse covariance between planes.
+        """
         plane = 0.5 / self.experiment.expectation.spectrum(self.experiment.grid)
         return self.quadratic.spread_plane(plane)
 
@@ -158,8 +179,8 @@ class Bound:
     def _with_prior(self, gain: float = 1.0) -> ComplexArray:
         matrix: ComplexArray = self.quadratic.matrix.per_block.astype(complex)
         matrix *= gain**2
-        index = np.arange(matrix.shape[-1])
-        matrix[..., index, index] += self.prior.T
+        expectation, grid = self.experiment.expectation, self.experiment.grid
+        matrix += self.prior.T[:, :, None] * expectation.axial_precision(grid, matrix.shape[-1])
         return matrix
 
     def standard_error(self, gain: float = 1.0) -> FloatArray:

@@ -180,11 +180,10 @@ def information_of(
     responses: Responses | None = None,
 ) -> Information:
     """No shot yet: the prior alone."""
-    prior = 0.5 / experiment.expectation.spectrum(experiment.grid)
     evolutions = np.unique([kind.evolution_s for kind in candidates.kinds])
     spectra = Spectra.of(experiment, np.asarray(sample_times, float), evolutions)
     responses = responses or Responses.of(experiment, candidates)
-    return Information(responses, spectra, prior)
+    return Information(responses, spectra, experiment.expectation)
 
 
 class _Search:

@@ -19,6 +19,7 @@ from __future__ import annotations
 import numpy as np
 from numpy.typing import NDArray
 
+from recon.planning.bound import Expectation
 from recon.planning.responses import Pair, Responses
 from recon.planning.spectra import Spectra
 
@@ -58,19 +59,20 @@ class Information:
 
     Parameters
     ----------
-    prior
-        ½ Γ⁻¹ in scaled units, (ny, nx), FFT order.
+    expectation
+        Gives ½ Γ⁻¹ in scaled units.
     """
 
-    def __init__(self, responses: Responses, spectra: Spectra, prior: FloatArray) -> None:
+    def __init__(self, responses: Responses, spectra: Spectra, expectation: Expectation) -> None:
         self.responses, self.spectra = responses, spectra
         self.shape = responses.candidates.grid.shape
         self.cosets = Cosets(self.shape[1:], responses.aliases)
         self.depth_weights: FloatArray = np.ones(self.shape[0])
-        members = prior.ravel()[self.cosets.members]
-        per_component = np.repeat(members, self.shape[0], axis=1)
-        self.prior = np.tile(per_component, (1, spectra.components))
-        blocks, size = self.prior.shape
+        grid = responses.candidates.grid
+        members = (0.5 / expectation.spectrum(grid)).ravel()[self.cosets.members]
+        diagonal = np.tile(np.repeat(members, self.shape[0], axis=1), (1, spectra.components))
+        blocks, size = diagonal.shape
+        self.prior = diagonal[:, :, None] * expectation.axial_precision(grid, size)
         self.data = np.zeros((spectra.modes, blocks, size, size), complex)
         self.refresh()
 
@@ -86,10 +88,7 @@ class Information:
 
     def refresh(self) -> None:
         """Invert afresh."""
-        matrices = self.data.copy()
-        index = np.arange(self.prior.shape[1])
-        matrices[..., index, index] += self.prior
-        self.inverse = np.linalg.inv(matrices)
+        self.inverse = np.linalg.inv(self.data + self.prior)
 
     def set_table(self, pairs: list[Pair]) -> None:
         """Replace whatever there is by a table of shots."""
