@@ -15,6 +15,7 @@ from numpy.typing import NDArray
 from recon.errors import InputError
 from recon.forward import ForwardModel, Statistics, accumulate
 from recon.forward.channels import Channels, LayerDensity
+from recon.forward.diffusing import JointStatistics, accumulate_joint
 from recon.forward.general import GeneralOperator
 from recon.forward.general_model import GeneralModel
 from recon.forward.general_statistics import gather
@@ -70,13 +71,7 @@ def reconstruct(
     """
     unknown = unknown or SpeciesAmounts()
     estimator = estimator or default_estimator(unknown)
-    need = estimate_memory(record, unknown, estimator)
-    if need > memory_limit_gib * 2**30:
-        raise InputError(
-            f"needs about {need / 2**30:.1f} GiB, the limit is {memory_limit_gib:g} GiB",
-            "reconstruction",
-            "raise the limit, or use fewer voxels or species",
-        )
+    _check_memory(estimate_memory(record, unknown, estimator), memory_limit_gib)
     reading = Reading(record)
     expand: ComplexArray | None = None
     whole: Any
@@ -86,13 +81,7 @@ def reconstruct(
     else:
         whole = reality.data_term(reading, unknown, progress)
         sensitivity = np.sqrt(whole.diagonal().mean(axis=1))
-    if not (sensitivity > 1e-6 * sensitivity.max()).all() or sensitivity.max() == 0:
-        raise InputError(
-            f"the record is blind to component {int(np.argmin(sensitivity)) + 1}",
-            "protocol",
-            "check sensing axes, gradients and sample times",
-        )
-    unit = 1 / sensitivity
+    unit = _units(sensitivity)
     quadratic = whole.scaled(unit)
     frame = Frame(quadratic.shape, record.specimen.grid.voxel, unit)
     estimate = estimator.estimate(quadratic, frame, progress).in_units(unit)
@@ -105,6 +94,26 @@ def reconstruct(
         remarks=estimate.remarks,
     )
     return unknown.result(record, estimate, expand, account)
+
+
+def _check_memory(need: int, limit_gib: float) -> None:
+    if need > limit_gib * 2**30:
+        raise InputError(
+            f"needs about {need / 2**30:.1f} GiB, the limit is {limit_gib:g} GiB",
+            "reconstruction",
+            "raise the limit, or use fewer voxels or species",
+        )
+
+
+def _units(sensitivity: NDArray[np.floating]) -> NDArray[np.floating]:
+    """Units in which every component has unit sensitivity."""
+    if not (sensitivity > 1e-6 * sensitivity.max()).all() or sensitivity.max() == 0:
+        raise InputError(
+            f"the record is blind to component {int(np.argmin(sensitivity)) + 1}",
+            "protocol",
+            "check sensing axes, gradients and sample times",
+        )
+    return 1 / sensitivity
 
 
 @dataclass(frozen=True)
@@ -129,6 +138,10 @@ class Reality:
     ) -> GeneralQuadratic:
         """The data term of a record, read once."""
         record = reading.record
+        if unknown.diffusing(record) is not None:
+            raise InputError(
+                "real channels with diffusion are not modelled", "reconstruction", "choose one"
+            )
         model = GeneralModel.build(
             record.specimen.grid,
             record.instrument,
@@ -168,9 +181,16 @@ class Reading:
 
 def read_statistics(
     reading: Reading | Record, unknown: Unknown, progress: Progress = silent
-) -> Statistics | GroupedStatistics:
+) -> Statistics | GroupedStatistics | JointStatistics:
     """One pass over the record: b, G, energy."""
     record = reading.record if isinstance(reading, Reading) else reading
+
+    def show(done: int) -> None:
+        progress("reading shots", done / len(record))
+
+    diffusing = unknown.diffusing(record)
+    if diffusing is not None:
+        return accumulate_joint(diffusing, reading.shots(), show)
     evolutions, group = record.protocol.evolutions
     models = [
         ForwardModel.build(
@@ -182,10 +202,6 @@ def read_statistics(
         )
         for evolution in evolutions
     ]
-
-    def show(done: int) -> None:
-        progress("reading shots", done / len(record))
-
     if len(models) == 1:
         return accumulate(models[0], reading.shots(), show)
     return accumulate_grouped(models, group, reading.shots(), show)

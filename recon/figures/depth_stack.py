@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+from collections.abc import Sequence
 from typing import Any
 
 import numpy as np
@@ -52,31 +53,41 @@ def depth_stack(
         for column, (name, maps) in enumerate(
             {quantity: values, "standard error": standard_error}.items()
         ):
-            low, high = amount_limits([maps])
-            images = []
-            for row, panel_axes in zip(planes, axes[::-1, column], strict=True):
-                images.append(
-                    panel_axes.imshow(
-                        np.ma.masked_invalid(maps[row]),
-                        origin="lower",
-                        extent=style.extent_um(grid),
-                        cmap=style.AMOUNTS,
-                        vmin=low,
-                        vmax=high,
-                        interpolation="nearest",
-                    )
-                )
-                panel_axes.set_xticks([])
-                panel_axes.set_yticks([])
-                panel_axes.spines[:].set_visible(False)
-            axes[0, column].set_title(name)
-            bar = figure.colorbar(
-                images[0], ax=list(axes[:, column]), location="bottom", label=unit, aspect=14
-            )
-            bar.outline.set_visible(False)
-            bar.ax.locator_params(nbins=3)
+            _column(figure, axes[:, column], name, [maps[row] for row in planes], grid, unit)
         for row, panel_axes in zip(planes, axes[::-1, 0], strict=True):
             panel_axes.set_ylabel(style.micrometres(grid.heights[row]))
         style.scale_bar(axes[-1, 0])
         figure.supylabel("height above the diamond", fontsize=10)
     return figure
+
+
+def _column(
+    figure: Figure,
+    axes: NDArray[Any],
+    name: str,
+    planes: Sequence[FloatArray],
+    grid: Grid,
+    unit: str,
+) -> None:
+    """Planes from the lowest axes upwards on one colour scale, with its bar."""
+    low, high = amount_limits(planes)
+    images = []
+    for plane, panel_axes in zip(planes, axes[::-1], strict=True):
+        images.append(
+            panel_axes.imshow(
+                np.ma.masked_invalid(plane),
+                origin="lower",
+                extent=style.extent_um(grid),
+                cmap=style.AMOUNTS,
+                vmin=low,
+                vmax=high,
+                interpolation="nearest",
+            )
+        )
+        panel_axes.set_xticks([])
+        panel_axes.set_yticks([])
+        panel_axes.spines[:].set_visible(False)
+    axes[0].set_title(name)
+    bar = figure.colorbar(images[0], ax=list(axes), location="bottom", label=unit, aspect=14)
+    bar.outline.set_visible(False)
+    bar.ax.locator_params(nbins=3)

@@ -120,11 +120,7 @@ class GeneralModel:
             amplitude=amplitude * middle_phase(nuclear_rest, grid),
             weight=np.asarray(protocol.averages, float) / noise_sd**2,
         )
-        if courses is not None and courses.shape != (len(encoding), *basis.shape):
-            raise InputError(
-                f"courses have shape {courses.shape}, not {(len(encoding), *basis.shape)}",
-                "sample times",
-            )
+        _check_courses(courses, (len(encoding), *basis.shape))
         return cls(
             ideal=ForwardModel(grid, encoding, basis, instrument, window.binning),
             amplitude=amplitude,
@@ -224,6 +220,11 @@ class GeneralModel:
         else:
             first = first + np.array(self.margin) * grid.voxel[1:]
         return transfer * np.exp(1j * wave_y * first[0])[:, None] * np.exp(1j * wave_x * first[1])
+
+
+def _check_courses(courses: ComplexArray | None, shape: tuple[int, ...]) -> None:
+    if courses is not None and courses.shape != shape:
+        raise InputError(f"courses have shape {courses.shape}, not {shape}", "sample times")
 
 
 def _check_maps(grid: Grid, window: Window, channels: Channels, layer: LayerDensity | None) -> None:

@@ -5,8 +5,8 @@
 With filters scaled so that Σ |ĥ_i(κ)|² = 1 this is the mean over all circular shifts of the ℓ1 norm
 of orthogonal wavelet coefficients, free of their block artefacts. The filters are products in the
 lateral frequencies, so that DᴴD is a symbol for every wavelet, biorthogonal ones too, and any side
-will do. Sources: Coifman & Donoho, Translation-invariant de-noising, Lecture Notes in Statistics
-103:125 (1995); Mallat, A Wavelet Tour of Signal Processing.
+will do. Sources: Coifman & Donoho, Translation-invariant de-noising, in Wavelets and Statistics,
+Springer (1995); Mallat, A Wavelet Tour of Signal Processing.
 """
 
 from __future__ import annotations
