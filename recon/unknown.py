@@ -12,14 +12,17 @@ from numpy.typing import NDArray
 from recon.basis import all_times, species_basis, time_basis
 from recon.errors import InputError
 from recon.forward import Statistics
+from recon.forward.diffusing import JointStatistics
+from recon.forward.diffusing_model import DiffusingModel
 from recon.forward.grouped import GroupedStatistics
 from recon.record import Record
 from recon.result import Account, Cube, Result, SpeciesMaps
 from recon.solvers.estimate import Estimate
 from recon.specimen import Species
+from recon.spreading import Spreading, warn_if_lost
 
 ComplexArray = NDArray[np.complexfloating]
-AnyStatistics = Statistics | GroupedStatistics
+AnyStatistics = Statistics | GroupedStatistics | JointStatistics
 
 
 class Unknown(Interface):
@@ -37,6 +40,9 @@ class Unknown(Interface):
     def basis(self, record: Record, evolution: float = 0.0) -> ComplexArray:
         """Φ (times, components), A/m per unit of each component, of shots that evolve so long."""
 
+    def diffusing(self, record: Record) -> DiffusingModel | None:
+        """The model in which patterns diffuse away while they are listened to, if wanted."""
+
     def components(self, record: Record) -> int:
         """How many components are solved for, at most."""
 
@@ -51,13 +57,37 @@ class Unknown(Interface):
 
 @dataclass(frozen=True)
 class SpeciesAmounts:
-    """Amounts in mM of species with known lines; by default those of the record's specimen."""
+    """Amounts in mM of species with known lines; by default those of the record's specimen.
+
+    Attributes
+    ----------
+    species
+        Those to solve for.
+    spreading
+        What diffusion does to wound patterns, `FreeDiffusion()` or `StandingMap()`; None for
+        molecules that stand still.
+    """
 
     species: tuple[Species, ...] = ()
     real: bool = True
+    spreading: Spreading | None = None
 
     def basis(self, record: Record, evolution: float = 0.0) -> ComplexArray:
         return species_basis(self._species(record), record.instrument, record.protocol, evolution)
+
+    def diffusing(self, record: Record) -> DiffusingModel | None:
+        if self.spreading is None:
+            mend = "give the amounts a spreading"
+            warn_if_lost(record.protocol, self._species(record), mend)
+            return None
+        return DiffusingModel.build(
+            record.specimen.grid,
+            record.instrument,
+            record.protocol,
+            self._species(record),
+            record.noise_sd,
+            self.spreading,
+        )
 
     def components(self, record: Record) -> int:
         return len(self._species(record))
@@ -101,12 +131,17 @@ class ComplexCube:
     def basis(self, record: Record, evolution: float = 0.0) -> ComplexArray:
         return time_basis(record.protocol, evolution)
 
+    def diffusing(self, record: Record) -> DiffusingModel | None:
+        mend = "a cube cannot follow it; solve for amounts, or evolve before encoding"
+        warn_if_lost(record.protocol, record.specimen.species, mend)
+        return None
+
     def components(self, record: Record) -> int:
         times = len(all_times(record.protocol))
         return min(self.vectors or times, times)
 
     def compressed(self, statistics: AnyStatistics) -> tuple[AnyStatistics, ComplexArray | None]:
-        if self.vectors == 0 or isinstance(statistics, GroupedStatistics):
+        if self.vectors == 0 or not isinstance(statistics, Statistics):
             return statistics, None
         count = len(statistics.linear)
         b = statistics.linear.reshape(count, -1)

@@ -17,6 +17,7 @@ from numpy.typing import NDArray
 from recon.errors import InputError
 from recon.forward.block_matrix import BlockMatrix
 from recon.forward.blocks import BlockQuadratic
+from recon.forward.diffusing import JointBlocks, JointStatistics
 from recon.forward.layout import Layout
 from recon.forward.model import ForwardModel
 from recon.forward.normal import normal_blocks
@@ -120,8 +121,12 @@ class GroupedBlocks(BlockQuadratic):
         return self._matrix(total, 1)
 
 
-def data_term(statistics: Statistics | GroupedStatistics, real: bool) -> BlockQuadratic:
+def data_term(
+    statistics: Statistics | GroupedStatistics | JointStatistics, real: bool
+) -> BlockQuadratic:
     """The data term that fits the statistics."""
+    if isinstance(statistics, JointStatistics):
+        return JointBlocks(statistics, real)
     if isinstance(statistics, GroupedStatistics):
         return GroupedBlocks(statistics, real)
     return BlockQuadratic(statistics, real)

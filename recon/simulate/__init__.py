@@ -6,7 +6,8 @@ zero-padded, so nothing wraps; the sensor layer goes on beyond the view, so ligh
 surroundings blurs in. Photons are counted. Nothing is shared with the forward operator but the
 descriptions and the optical transfer function.
 
-Approximations: the amplitude of a shot is the protocol's own (no T1 or diffusion); the light is
+Approximations: the amplitude of a shot is the protocol's own (no T1); molecules stand still unless
+`SimulationOptions.spreading` says what diffusion does; the light is
 point-sampled at fine voxels, each sample standing for its voxel's mean up to frequencies that
 the fine voxels resolve.
 """
@@ -27,10 +28,12 @@ from recon.instrument import Instrument, Readout
 from recon.physics import photons
 from recon.protocol import Protocol
 from recon.record import Record, RecordWriter, samples_shape
+from recon.simulate.diffusing import diffusing_fields
 from recon.simulate.images import Progress, Samples, species_images
 from recon.simulate.noise import NoNoise, PhotonNoise, PoissonNoise
 from recon.simulate.scene import Scene
 from recon.specimen import Specimen
+from recon.spreading import Spreading
 
 __all__ = ["NoNoise", "PhotonNoise", "PoissonNoise", "SimulationOptions", "simulate"]
 
@@ -54,6 +57,9 @@ class SimulationOptions:
         `PoissonNoise()` or `NoNoise()`.
     memory_limit_gib
         The simulation is refused if it would need more.
+    spreading
+        What diffusion does to wound patterns, `FreeDiffusion()` or `StandingMap()`; None for
+        molecules that stand still. Every sample time is then a convolution of its own.
     """
 
     lateral_refinement: int = 1
@@ -61,6 +67,7 @@ class SimulationOptions:
     wavevector_jitter: float = 0.0
     photon_noise: PhotonNoise = field(default_factory=PoissonNoise)
     memory_limit_gib: float = 4.0
+    spreading: Spreading | None = None
 
     def __post_init__(self) -> None:
         if min(self.lateral_refinement, self.axial_refinement) < 1:
@@ -113,12 +120,19 @@ def simulate(
         seed,
     )
     _check_memory(scene, in_file=path is not None, limit=options.memory_limit_gib * 2**30)
-    images = species_images(scene, progress)
     courses = _time_courses(specimen, instrument, protocol)
+    if options.spreading is None:
+        images = species_images(scene, progress)
+        strongest = float(np.abs(images).sum(axis=1).max())
+        fields = _fields(images, courses, protocol)
+    else:
+        diffusion = np.array([one.diffusion for one in specimen.species])
+        moving = diffusing_fields(scene, courses, diffusion, options.spreading, progress)
+        strongest, fields = float(np.abs(moving).max()), iter(moving)
     if isinstance(options.photon_noise, PoissonNoise):
-        _warn_if_not_linear(images, instrument.readout)
+        _warn_if_not_linear(strongest, instrument.readout)
     description = specimen.description_json()
-    measured = _measure(images, courses, instrument, protocol, options.photon_noise, seed)
+    measured = _measure(fields, instrument, protocol, options.photon_noise, seed)
     noise_sd = instrument.field_noise
     if path is None:
         samples = np.empty(samples_shape(instrument, protocol), np.complex64)
@@ -145,25 +159,29 @@ def _time_courses(
     return np.asarray(courses).transpose(0, 2, 1).astype(np.complex64)
 
 
+def _fields(
+    images: Samples, courses: NDArray[np.complex64], protocol: Protocol
+) -> Iterator[Samples]:
+    """True field (times, cy, cx) of one shot after the other, patterns standing still."""
+    for image, group in zip(images, protocol.evolutions[1], strict=True):
+        yield np.tensordot(courses[group], image, 1)
+
+
 def _measure(
-    images: Samples,
-    courses: NDArray[np.complex64],
+    fields: Iterator[Samples],
     instrument: Instrument,
     protocol: Protocol,
     noise: PhotonNoise,
     seed: int,
 ) -> Iterator[Samples]:
     """Samples (times, cy, cx) of one shot after the other."""
-    group = protocol.evolutions[1]
-    for shot, image in enumerate(images):
-        field = np.tensordot(courses[group[shot]], image, 1)
+    for shot, true in enumerate(fields):
         generator = np.random.default_rng([seed, shot])
-        yield noise.samples(field, instrument.readout, int(protocol.averages[shot]), generator)
+        yield noise.samples(true, instrument.readout, int(protocol.averages[shot]), generator)
 
 
-def _warn_if_not_linear(images: Samples, readout: Readout) -> None:
-    """Say so if the field turns the sensor spins beyond their linear range."""
-    field = float(np.abs(images).sum(axis=1).max())
+def _warn_if_not_linear(field: float, readout: Readout) -> None:
+    """Say so if the field, T, turns the sensor spins beyond their linear range."""
     phase = field * photons.phase_per_field(readout.sensing_time, readout.efficiency)
     if phase > LINEAR_PHASE:
         warnings.warn(

@@ -22,7 +22,7 @@ def species_images(scene: Scene, progress: Progress | None) -> Samples:
     channels = scene.instrument.detector.channels()
     shots, species = len(scene.protocol), len(scene.magnetisation)
     images = np.empty((shots, species, *channels), np.complex64)
-    detect = _detector(scene)
+    detect = detector(scene)
     done = 0
     for axis, members, largest in scene.axes():
         sheet = scene.sheet(axis)
@@ -60,7 +60,7 @@ def _field(
     return np.asarray(field[..., where_x])
 
 
-def _detector(scene: Scene) -> Callable[[Samples, Wavevectors], Samples]:
+def detector(scene: Scene) -> Callable[[Samples, Wavevectors], Samples]:
     """The function (field at the places, q) → channels, (species, cy, cx)."""
     (dy, dx), (ny, nx) = scene.grid.voxel[1:], scene.grid.shape[1:]
     (my, mx), (py, px) = scene.margin, scene.places

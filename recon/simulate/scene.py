@@ -89,10 +89,12 @@ class Scene:
 
     def layers(self) -> Iterator[tuple[FineVoxels, NDArray[np.float32]]]:
         """Fine voxel layers that hold something, with their magnetisation (species, ny, nx)."""
+        return (layer for layer in self.all_layers() if layer[1].any())
+
+    def all_layers(self) -> Iterator[tuple[FineVoxels, NDArray[np.float32]]]:
+        """Every fine voxel layer, upwards."""
         for level, height in enumerate(self.grid.heights):
             content = self.magnetisation[:, level]
-            if not content.any():
-                continue
             first = (-self.margin[0], -self.margin[1])
             yield (
                 FineVoxels(float(height), self.grid.voxel, first, self.padded, self.places),
