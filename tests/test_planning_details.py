@@ -233,6 +233,19 @@ def test_a_larger_voxel_takes_view_pixels_and_wavevectors_along():
     assert np.isfinite(Bound.of(made, table).detection_limit()).all()
 
 
+def test_an_amount_is_not_seen_by_expecting_it():
+    """One shot of almost no signal: the limit is far beyond the expected spread."""
+    setting = planning.experiment(spread=1.0)
+    weak = replace(planning.table(1), amplitude=np.full(1, 1e-3 + 0j))
+    bound = Bound.of(setting, weak)
+    assert bound.standard_error() == pytest.approx(1.0, rel=1e-3)
+    assert (bound.detection_limit() > 100).all()
+    strong = Bound.of(replace(setting, noise_gain=1e3), planning.table(200))
+    np.testing.assert_allclose(
+        strong.error_of_shots()[0, 0], strong.standard_error()[0, 0], rtol=0.1
+    )
+
+
 def test_four_averages_halve_the_noise_without_prior():
     setting = planning.experiment()
     protocol = UniformRandom(shots=200, axes=(1,), axial_bound_rad_per_um=0.8).protocol(

@@ -34,6 +34,8 @@ ComplexArray = NDArray[np.complexfloating]
 
 DETECTION = 3.3
 """Detection limit over standard error (ICH Q2(R1), Validation of Analytical Procedures)."""
+NOTHING = 1e-6
+"""Information of the shots over that of the expectation, below which rounding hides it."""
 SINGULAR = 1e-6
 """Eigenvalues of G below this share of the largest are not known from single precision."""
 
@@ -200,9 +202,18 @@ class Bound:
         variance = 0.5 * self.quadratic.plane_mean_of_diagonal(parts.sum(axis=-1))
         return np.sqrt(variance) * self.unit[:, None]
 
-    def detection_limit(self) -> FloatArray:
-        """3.3 standard errors with the prior, (species, nz), mM."""
-        return DETECTION * self.standard_error()
+    def error_of_shots(self, gain: float = 1.0) -> FloatArray:
+        """What the shots add to the expectation, as an error of their own, (species, nz), mM.
+
+        1/√(1/variance − 1/variance before), as of two independent sources (Kay 1993): it is not
+        small only because the expectation is narrow.
+        """
+        after, before = 1 / self.standard_error(gain) ** 2, 1 / self.unit[:, None] ** 2
+        return 1 / np.sqrt(np.maximum(after - before, NOTHING * before))
+
+    def detection_limit(self, gain: float = 1.0) -> FloatArray:
+        """3.3 errors of the shots, (species, nz), mM."""
+        return DETECTION * self.error_of_shots(gain)
 
     def condition(self) -> FloatArray:
         """Condition number of every block of G, (groups, blocks)."""

@@ -13,7 +13,7 @@ from numpy.typing import NDArray
 from recon.basis import species_basis
 from recon.instrument import OneDetector
 from recon.physics.diffusion import line_width
-from recon.planning.bound import DETECTION, Bound, Experiment
+from recon.planning.bound import Bound, Experiment
 from recon.planning.limits import Limits, Loss
 from recon.planning.mends import duration, mends
 from recon.protocol import Protocol, SpectralAxis
@@ -188,6 +188,7 @@ class Feasibility:
     def _errors(self) -> Iterator[str]:
         """Errors and resolution in the lowest, a middle and the highest plane."""
         error, heights = self.bound.standard_error(), self.experiment.grid.heights * 1e6
+        short = self.shortfall()
         rows = sorted({0, len(heights) // 2, len(heights) - 1})
         yield f"{'':<12}{'expected':>12}  " + "".join(
             f"{f'z {heights[r]:.3g} µm':>26}" for r in rows
@@ -196,8 +197,8 @@ class Feasibility:
             amount = self.amounts_mM[place]
             cells = []
             for row in rows:
-                limit = DETECTION * error[place, row]
-                seen = "seen" if limit <= amount else f"short {limit / amount:.2g} x"
+                much = short[place, row]
+                seen = "seen" if much <= 1 else f"short {much:.2g} x"
                 cells.append(f"{f'± {error[place, row]:.3g}, {seen}':>26}")
             yield f"{one.name:<12}{amount:>9.4g} mM  " + "".join(cells)
         widths = self.bound.resolution() * 1e6

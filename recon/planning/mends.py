@@ -29,7 +29,10 @@ def mends(plan: Feasibility) -> Iterator[str]:
     yield f"for {name} at {height:.3g} µm, short by a factor of {worst:.3g}:"
     gain = needed_gain(plan, species, depth)
     if gain is None:
-        yield f"  no gain up to {MOST_GAIN:g} closes it: the shots do not reach this depth"
+        yield (
+            f"  no gain up to {MOST_GAIN:g} closes it: these shots do not tell it apart; take more "
+            "or other ones"
+        )
     else:
         yield f"  {gain:.3g} times the polarisation{_polarisation(plan, species, gain)}"
         yield f"  or {gain**2:.3g} times the averages: {duration(plan.seconds() * gain**2)}"
@@ -47,11 +50,10 @@ def mends(plan: Feasibility) -> Iterator[str]:
 
 def needed_gain(plan: Feasibility, species: int, depth: int) -> float | None:
     """Least factor of signal-to-noise at which the amount is detected, by bisection."""
-    short = plan.shortfall()[species, depth]
-    error = plan.bound.standard_error()[species, depth]
+    amount = plan.amounts_mM[species]
 
     def enough(gain: float) -> bool:
-        return bool(short * plan.bound.standard_error(gain)[species, depth] <= error)
+        return bool(plan.bound.detection_limit(gain)[species, depth] <= amount)
 
     low, high = 1.0, MOST_GAIN
     if not enough(high):
