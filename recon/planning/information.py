@@ -138,8 +138,8 @@ class Information:
         for inverse, u in zip(self.inverse, vectors, strict=True):
             moved = inverse[touched] @ u
             core = _core(u, moved, strength)
-            outer = (moved.conj() * self.diagonal_weights[:, None]).swapaxes(1, 2) @ moved
-            traces = (core * outer.swapaxes(1, 2)).sum(axis=(1, 2)).real
+            outer = _inner(moved, moved * self.diagonal_weights[:, None])
+            traces = np.einsum("kab,kba->k", core, outer).real
             total += float(traces @ self.cosets.counts[touched])
         return 0.5 * self.share * total
 
@@ -155,7 +155,7 @@ class Information:
 
 def _core(u: ComplexArray, moved: ComplexArray, strength: float) -> ComplexArray:
     """(1/strength + Uᴴ M⁻¹ U)⁻¹ per block; in closed form for two vectors."""
-    inner = u.conj().swapaxes(1, 2) @ moved
+    inner = _inner(u, moved)
     index = np.arange(inner.shape[-1])
     inner[:, index, index] += 1 / strength
     if len(index) != 2:
@@ -165,3 +165,14 @@ def _core(u: ComplexArray, moved: ComplexArray, strength: float) -> ComplexArray
     inverse[:, 0, 1], inverse[:, 1, 0] = -inner[:, 0, 1], -inner[:, 1, 0]
     determinant = inner[:, 0, 0] * inner[:, 1, 1] - inner[:, 0, 1] * inner[:, 1, 0]
     return inverse / determinant[:, None, None]
+
+
+def _inner(left: ComplexArray, right: ComplexArray) -> ComplexArray:
+    """leftᴴ right per block, (blocks, vectors, vectors)."""
+    count = left.shape[-1]
+    found = np.empty((len(left), count, count), complex)
+    conjugate = left.conj()
+    for row in range(count):
+        for column in range(count):
+            found[:, row, column] = np.einsum("kn,kn->k", conjugate[..., row], right[..., column])
+    return found

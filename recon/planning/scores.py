@@ -21,6 +21,8 @@ FloatArray = NDArray[np.floating]
 
 Offset = tuple[int, int]
 
+BATCH = 32
+
 
 class Scores:
     """Correlates; holds the spectra of the fields' products."""
@@ -71,10 +73,14 @@ class Scores:
         rest = slope.shape[-1] // components
         split = slope.reshape(*slope.shape[:2], components, rest, components, rest)
         gram = np.einsum("rcp,rdp->rcd", factor.conj(), factor)
-        small = [
-            np.einsum("rcd,rkcadb->kab", gram, split, optimize=True),
-            np.einsum("rcd,rkcadb->kab", gram, split.conj(), optimize=True),
-        ]
+        if components == 1:
+            here = np.tensordot(gram[:, 0, 0].real, slope, 1)
+            small = [here, here.conj()]
+        else:
+            small = [
+                np.einsum("rcd,rkcadb->kab", gram, split, optimize=True),
+                np.einsum("rcd,rkcadb->kab", gram, split.conj(), optimize=True),
+            ]
         return np.stack(small).reshape(2, -1, self._aliases, nz, self._aliases, nz)
 
     def _half_offsets(self) -> list[Offset]:
@@ -106,9 +112,11 @@ class Scores:
         rows = (self.candidates.steps[:, 0] + ny // 2 - ny) % (2 * ny)
         columns = (self.candidates.steps[:, 1] + nx // 2 - nx) % (2 * nx)
         falls = np.empty((len(fields), len(rows)))
-        for number, field in enumerate(fields):
-            total = np.einsum("pyx,pyx->yx", self._products[field], spectrum)
-            falls[number] = scipy.fft.ifft2(total, workers=2).real[rows, columns]
+        for first in range(0, len(fields), BATCH):
+            some = fields[first : first + BATCH]
+            total = [_dot(self._products[field], spectrum) for field in some]
+            lags = scipy.fft.ifft2(np.stack(total), workers=2, overwrite_x=True)
+            falls[first : first + BATCH] = lags.real[:, rows, columns]
         return falls
 
     def _weights(self, seen: ComplexArray, offset: Offset) -> ComplexArray:
@@ -145,6 +153,15 @@ class Scores:
             curved = np.einsum("a,kab,b->k", h, blocks, h.conj()).real
             falls[number] = curved * self.responses.footprint[y + ny, x + nx] ** 2
         return falls
+
+
+def _dot(left: ComplexArray, right: ComplexArray) -> ComplexArray:
+    """Sum over the first axis of the product; plane by plane, which stays in the cache."""
+    total, part = left[0] * right[0], np.empty_like(left[0])
+    for one, other in zip(left[1:], right[1:], strict=True):
+        np.multiply(one, other, out=part)
+        total += part
+    return total
 
 
 def _entries(nz: int, offset: Offset) -> tuple[NDArray[np.intp], NDArray[np.intp], FloatArray]:
