@@ -186,26 +186,25 @@ class Feasibility:
         return "\n".join(lines + [f"note: {text}" for text in self.warnings()])
 
     def _errors(self) -> Iterator[str]:
-        """Errors and resolution in the lowest, a middle and the highest plane."""
-        error, heights = self.bound.standard_error(), self.experiment.grid.heights * 1e6
-        short = self.shortfall()
+        """Errors, detection limits and resolution in the lowest, a middle and the highest plane."""
+        error, limit = self.bound.standard_error(), self.bound.detection_limit()
+        heights = self.experiment.grid.heights * 1e6
         rows = sorted({0, len(heights) // 2, len(heights) - 1})
-        yield f"{'':<12}{'expected':>12}  " + "".join(
-            f"{f'z {heights[r]:.3g} µm':>26}" for r in rows
-        )
+        table = [["mM, ± error, limit", "expected", *(f"z {heights[r]:.3g} µm" for r in rows)]]
         for place, one in enumerate(self.experiment.species):
-            amount = self.amounts_mM[place]
-            cells = []
+            amount, cells = self.amounts_mM[place], []
             for row in rows:
-                much = short[place, row]
-                seen = "seen" if much <= 1 else f"short {much:.2g} x"
-                cells.append(f"{f'± {error[place, row]:.3g}, {seen}':>26}")
-            yield f"{one.name:<12}{amount:>9.4g} mM  " + "".join(cells)
+                much = limit[place, row] / amount
+                seen = "seen" if much <= 1 else f"{much:.2g} x short"
+                cells.append(f"± {error[place, row]:.3g}, {limit[place, row]:.3g}, {seen}")
+            table.append([one.name, f"{amount:.4g}", *cells])
         widths = self.bound.resolution() * 1e6
-        yield (
-            f"{'resolution, across and along z (µm)':<26}".ljust(26)
-            + "".join(f"{f'{widths[r, 2]:.3g}, {widths[r, 0]:.3g}':>26}" for r in rows)[9:]
-        )
+        cells = [f"{widths[r, 2]:.3g} across, {widths[r, 0]:.3g} along z" for r in rows]
+        table.append(["resolution, µm", "", *cells])
+        sizes = [max(map(len, column)) for column in zip(*table, strict=True)]
+        for name, *cells in table:
+            right = (cell.rjust(size) for cell, size in zip(cells, sizes[1:], strict=True))
+            yield "  ".join([name.ljust(sizes[0]), *right])
 
 
 def verdict(factors: dict[str, float]) -> str:
