@@ -12,7 +12,7 @@ from scipy import constants
 from recon.errors import InputError
 from recon.instrument import Instrument
 from recon.physics.magnetisation import polarised_magnetisation, thermal_polarisation
-from recon.physics.spins import time_signal
+from recon.physics.spins import LineList, time_signal
 from recon.protocol import Protocol
 from recon.species_table import SpinSpecies, species_named
 from recon.specimen import Species
@@ -67,6 +67,18 @@ def time_course(
         )
     lines = entry.lines(instrument.larmor_frequency, reference_shift_ppm)
     return time_signal(lines, times, species.t2_star) / entry.protons
+
+
+def species_lines(species: Species, instrument: Instrument, reference_shift_ppm: float) -> LineList:
+    """The lines behind `time_course`: intensities add up to 1, decay rates include 1/T2*."""
+    frequency = instrument.larmor_frequency
+    if species.spin_system is None:
+        offset = (species.shift_ppm - reference_shift_ppm) * 1e-6 * frequency
+        return LineList(np.array([offset]), np.ones(1), np.array([1 / species.t2_star]))
+    entry = _spin_species(species.spin_system)
+    lines = entry.lines(frequency, reference_shift_ppm).scaled(1 / entry.protons)
+    rates = lines.decay_rates + 1 / species.t2_star
+    return LineList(lines.frequencies, lines.intensities, rates)
 
 
 @cache

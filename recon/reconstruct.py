@@ -13,20 +13,20 @@ import numpy as np
 from numpy.typing import NDArray
 
 from recon.errors import InputError
-from recon.forward import ForwardModel, Statistics, accumulate
+from recon.forward import ForwardModel, accumulate
 from recon.forward.channels import Channels, LayerDensity
-from recon.forward.diffusing import JointStatistics, accumulate_joint
+from recon.forward.diffusing import accumulate_joint
 from recon.forward.general import GeneralOperator
 from recon.forward.general_model import GeneralModel
 from recon.forward.general_statistics import gather
-from recon.forward.grouped import GroupedStatistics, accumulate_grouped, data_term
+from recon.forward.grouped import accumulate_grouped, data_term
 from recon.priors import Frame, NonNegative, Prior, TotalVariation
 from recon.record import Record
 from recon.result import Account, Result
 from recon.solvers.estimate import Estimator, Progress, silent
 from recon.solvers.general import GeneralQuadratic
 from recon.solvers.penalised import Penalised
-from recon.unknown import SpeciesAmounts, Unknown
+from recon.unknown import AnyStatistics, SpeciesAmounts, Unknown
 
 ComplexArray = NDArray[np.complexfloating]
 
@@ -74,14 +74,17 @@ def reconstruct(
     _check_memory(estimate_memory(record, unknown, estimator), memory_limit_gib)
     reading = Reading(record)
     expand: ComplexArray | None = None
+    read: AnyStatistics | None
     whole: Any
     if reality is None:
-        statistics, expand = unknown.compressed(read_statistics(reading, unknown, progress))
+        read = read_statistics(reading, unknown, progress)
+        statistics, expand = unknown.compressed(read)
         whole, sensitivity = data_term(statistics, unknown.real), statistics.sensitivity()
     else:
-        whole = reality.data_term(reading, unknown, progress)
+        read, whole = None, reality.data_term(reading, unknown, progress)
         sensitivity = np.sqrt(whole.diagonal().mean(axis=1))
     unit = _units(sensitivity)
+    unknown.check(record, read)
     quadratic = whole.scaled(unit)
     frame = Frame(quadratic.shape, record.specimen.grid.voxel, unit)
     estimate = estimator.estimate(quadratic, frame, progress).in_units(unit)
@@ -181,7 +184,7 @@ class Reading:
 
 def read_statistics(
     reading: Reading | Record, unknown: Unknown, progress: Progress = silent
-) -> Statistics | GroupedStatistics | JointStatistics:
+) -> AnyStatistics:
     """One pass over the record: b, G, energy."""
     record = reading.record if isinstance(reading, Reading) else reading
 

@@ -9,6 +9,7 @@ from typing import Protocol as Interface
 import numpy as np
 from numpy.typing import NDArray
 
+from recon.band import warn_of_folds
 from recon.basis import all_times, species_basis, time_basis
 from recon.errors import InputError
 from recon.forward import Statistics
@@ -17,6 +18,7 @@ from recon.forward.diffusing_model import DiffusingModel
 from recon.forward.grouped import GroupedStatistics
 from recon.record import Record
 from recon.result import Account, Cube, Result, SpeciesMaps
+from recon.separability import Separability
 from recon.solvers.estimate import Estimate
 from recon.specimen import Species
 from recon.spreading import Spreading, warn_if_lost
@@ -42,6 +44,9 @@ class Unknown(Interface):
 
     def diffusing(self, record: Record) -> DiffusingModel | None:
         """The model in which patterns diffuse away while they are listened to, if wanted."""
+
+    def check(self, record: Record, statistics: AnyStatistics | None) -> None:
+        """Warn of what this record's spectral axis cannot tell; no statistics in a reality."""
 
     def components(self, record: Record) -> int:
         """How many components are solved for, at most."""
@@ -77,8 +82,6 @@ class SpeciesAmounts:
 
     def diffusing(self, record: Record) -> DiffusingModel | None:
         if self.spreading is None:
-            mend = "give the amounts a spreading"
-            warn_if_lost(record.protocol, self._species(record), mend)
             return None
         return DiffusingModel.build(
             record.specimen.grid,
@@ -88,6 +91,16 @@ class SpeciesAmounts:
             record.noise_sd,
             self.spreading,
         )
+
+    def check(self, record: Record, statistics: AnyStatistics | None) -> None:
+        species = self._species(record)
+        if self.spreading is None:
+            warn_if_lost(record.protocol, species, "give the amounts a spreading")
+        warn_of_folds(species, record.instrument, record.protocol)
+        if statistics is not None and len(species) > 1:
+            names = tuple(one.name for one in species)
+            # a real amount meets half of the noise
+            Separability(names, 2 * statistics.spectral_gram()).warn()
 
     def components(self, record: Record) -> int:
         return len(self._species(record))
@@ -132,9 +145,13 @@ class ComplexCube:
         return time_basis(record.protocol, evolution)
 
     def diffusing(self, record: Record) -> DiffusingModel | None:
-        mend = "a cube cannot follow it; solve for amounts, or evolve before encoding"
-        warn_if_lost(record.protocol, record.specimen.species, mend)
         return None
+
+    def check(self, record: Record, statistics: AnyStatistics | None) -> None:
+        species = record.specimen.species
+        mend = "a cube cannot follow it; solve for amounts, or evolve before encoding"
+        warn_if_lost(record.protocol, species, mend)
+        warn_of_folds(species, record.instrument, record.protocol)
 
     def components(self, record: Record) -> int:
         times = len(all_times(record.protocol))

@@ -176,9 +176,9 @@ class JointStatistics:
     samples: int
 
     @property
-    def gram(self) -> FloatArray:
-        """Mean diagonal of G per component as a diagonal matrix."""
-        return np.diag(self.sensitivity() ** 2)
+    def gram(self) -> ComplexArray:
+        """As `spectral_gram`."""
+        return self.spectral_gram()
 
     def __add__(self, other: JointStatistics) -> JointStatistics:
         """Statistics of both sets of shots together."""
@@ -208,6 +208,13 @@ class JointStatistics:
     def sensitivity(self) -> FloatArray:
         """Square root of the mean diagonal of G per component: signal-to-noise of one unit."""
         return np.sqrt(self.plane_diagonal().mean(axis=1))
+
+    def spectral_gram(self) -> ComplexArray:
+        """G between components, mean over voxels, (components, components)."""
+        components = len(self.linear)
+        q = len(self.normal) // components
+        entries = self.normal.reshape(components, q, components, q, -1)
+        return np.asarray(np.einsum("aqbqk->ab", entries) / (q * np.prod(self.layout.blocks)))
 
 
 class JointBlocks(BlockQuadratic):

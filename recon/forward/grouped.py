@@ -75,12 +75,15 @@ class GroupedStatistics:
 
     def sensitivity(self) -> FloatArray:
         """Square root of the mean diagonal of G per component: signal-to-noise of one unit."""
-        mean = np.zeros(len(self.grams[0]))
+        return np.sqrt(np.diag(self.spectral_gram()).real)
+
+    def spectral_gram(self) -> ComplexArray:
+        """G between components, mean over voxels, (components, components)."""
+        total = np.zeros_like(self.grams[0])
         for gram, normal in zip(self.grams, self.normals, strict=True):
             share = float(np.einsum("aayx->", normal).real)
-            share /= len(normal) * float(np.prod(self.layout.blocks))
-            mean = mean + np.diag(gram).real * share
-        return np.sqrt(mean)
+            total = total + gram * (share / (len(normal) * float(np.prod(self.layout.blocks))))
+        return np.asarray(total)
 
 
 class GroupedBlocks(BlockQuadratic):

@@ -87,9 +87,13 @@ class Statistics:
 
     def sensitivity(self) -> FloatArray:
         """Square root of the mean diagonal of G per component: signal-to-noise of one unit."""
+        return np.sqrt(np.diag(self.spectral_gram()).real)
+
+    def spectral_gram(self) -> ComplexArray:
+        """G between components, mean over voxels, (components, components)."""
         q = len(self.normal)
         mean = float(np.einsum("aayx->", self.normal).real) / (q * np.prod(self.layout.blocks))
-        return np.sqrt(np.diag(self.gram).real * mean)
+        return np.asarray(self.gram * mean)
 
 
 def accumulate(
