@@ -244,6 +244,27 @@ def line(number: int) -> dict[str, object]:
     }
 
 
+def ratios(detector, camera, tables) -> dict[str, object]:
+    """The study in figures: r.m.s. errors with over without."""
+    (one, width), (axial, _), (several, widths) = detector.values()
+    return {
+        "one_detector_error_several_q_over_best_single_q": total(several) / total(one),
+        "one_detector_error_several_q_over_z_gradient": total(several) / total(axial),
+        "one_detector_axial_width_several_over_single": float(np.mean(widths / width)),
+        "camera_error_sensor_only_over_neither": total(camera["sensor gradient only"])
+        / total(camera["neither gradient"]),
+        "camera_error_both_over_nuclear_only": total(camera["both gradients"])
+        / total(camera["nuclear gradient only"]),
+        "error_together_over_separately": {
+            name: r["together"] / r["separate"][0][0] for name, r in tables.items()
+        },
+        "error_together_over_same_sum": {
+            name: r["together"] / r["same sum"] for name, r in tables.items()
+        },
+        "shots_separate_over_together": {name: r["needed"] for name, r in tables.items()},
+    }
+
+
 def main() -> None:
     parser = argparse.ArgumentParser()
     parser.add_argument("--json", action="store_true")
@@ -293,25 +314,7 @@ def main() -> None:
     )
     if options.figure:
         draw(options.figure, detector, camera, tables, (scene.grid, coarse.grid))
-    (one, width), (axial, _), (several, widths) = detector.values()
-    emit(
-        {
-            "one_detector_error_several_q_over_best_single_q": total(several) / total(one),
-            "one_detector_error_several_q_over_z_gradient": total(several) / total(axial),
-            "one_detector_axial_width_several_over_single": float(np.mean(widths / width)),
-            "camera_error_sensor_only_over_neither": total(camera["sensor gradient only"])
-            / total(camera["neither gradient"]),
-            "camera_error_both_over_nuclear_only": total(camera["both gradients"])
-            / total(camera["nuclear gradient only"]),
-            "error_together_over_separately": {
-                name: r["together"] / r["separate"][0][0] for name, r in tables.items()
-            },
-            "error_together_over_same_sum": {
-                name: r["together"] / r["same sum"] for name, r in tables.items()
-            },
-            "shots_separate_over_together": {name: r["needed"] for name, r in tables.items()},
-        }
-    )
+    emit(ratios(detector, camera, tables))
 
 
 if __name__ == "__main__":
