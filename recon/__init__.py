@@ -10,6 +10,9 @@ from recon.grid import Grid
 from recon.instrument import Instrument
 from recon.specimen import Species, Specimen
 from recon.protocol import Protocol, SpectralAxis
+from recon.spreading import FreeDiffusion, StandingMap
+from recon.band import Band
+from recon.separability import Separability
 from recon.simulate import SimulationOptions, simulate
 from recon.record import Record, RecordWriter
 from recon.unknown import ComplexCube, SpeciesAmounts
@@ -30,9 +33,11 @@ from recon.reconstruct import reconstruct
 from recon.result import Cube, SpeciesMaps, load_result
 
 __all__ = [
+    "Band",
     "Box",
     "ComplexCube",
     "Cube",
+    "FreeDiffusion",
     "Grid",
     "InputError",
     "InputWarning",
@@ -45,12 +50,14 @@ __all__ = [
     "Record",
     "RecordWriter",
     "Ridge",
+    "Separability",
     "SimulationOptions",
     "Species",
     "SpeciesAmounts",
     "SpeciesMaps",
     "Specimen",
     "SpectralAxis",
+    "StandingMap",
     "Support",
     "TotalGeneralisedVariation",
     "TotalVariation",

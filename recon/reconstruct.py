@@ -15,7 +15,7 @@ from numpy.typing import NDArray
 from recon.errors import InputError
 from recon.forward import ForwardModel, accumulate
 from recon.forward.channels import Channels, LayerDensity
-from recon.forward.diffusing import accumulate_joint
+from recon.forward.diffusing import accumulate_joint, joint_memory
 from recon.forward.general import GeneralOperator
 from recon.forward.general_model import GeneralModel
 from recon.forward.general_statistics import gather
@@ -233,7 +233,9 @@ def estimate_memory(record: Record, unknown: Unknown, estimator: Estimator | Non
     count = np.prod(grid.shape[1:]) / aliases
     if unknown.real and aliases == 1:
         count *= (grid.shape[2] // 2 + 1) / grid.shape[2]
-    return int((8 + 7 * images) * cube + 8 * (8 * size**2 * count))
+    diffusing = unknown.diffusing(record)
+    reading = 0 if diffusing is None else joint_memory(diffusing)
+    return int(reading + (8 + 7 * images) * cube + 8 * (8 * size**2 * count))
 
 
 def provenance(reading: Reading, estimator: Any) -> dict[str, Any]:

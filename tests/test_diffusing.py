@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+import tracemalloc
 from dataclasses import replace
 
 import numpy as np
@@ -9,9 +10,10 @@ import pytest
 
 from recon.errors import InputError
 from recon.forward import BlockQuadratic, ForwardModel, ForwardOperator, accumulate
-from recon.forward.diffusing import DiffusingOperator, JointBlocks, accumulate_joint
+from recon.forward.diffusing import DiffusingOperator, JointBlocks, accumulate_joint, joint_memory
 from recon.forward.diffusing_model import DiffusingModel
 from recon.grid import Grid
+from recon.physics.diffusion import wound_layers
 from recon.protocol import SpectralAxis
 from recon.specimen import Species
 from recon.spreading import FreeDiffusion, StandingMap
@@ -206,3 +208,28 @@ def test_unwound_standing_map_loses_nothing():
 def test_sampling_within_the_pulse_is_refused():
     with pytest.raises(InputError, match="within the encoding pulse"):
         table(FINE, 1e-3, True)
+
+
+@pytest.mark.parametrize("spreading", [FreeDiffusion(), StandingMap()], ids=["free", "standing"])
+def test_memory_is_foreseen(spreading):
+    """What reading a record takes, by the interpreter's own count."""
+    grid = Grid((3, 24, 24), (1e-6, 1e-6, 1e-6))
+    made = protocol(grid, True, False, (1,), 6)
+    made = replace(made, nuclear_wavevector=made.nuclear_wavevector * [1, 1, 0])
+    model = DiffusingModel.build(grid, instrument(grid=grid), made, PAIR, NOISE, spreading)
+    samples = np.ones((6, model.times, 24, 24), np.complex64)
+    tracemalloc.start()
+    accumulate_joint(model, [(slice(0, 6), samples)])
+    peak = tracemalloc.get_traced_memory()[1]
+    tracemalloc.stop()
+    assert 0.6 * peak < joint_memory(model) < 2.5 * peak
+
+
+def test_closed_slab_seen_from_afar_keeps_four_over_pi_squared():
+    """Wound to π/a, spread for long, rewound: Tanner & Stejskal's plateau, from the layers seen."""
+    count, thickness = 5, 10e-6
+    k = np.pi / thickness
+    late = wound_layers(np.zeros(1), count, thickness, k, np.array([1e-6]), standing=True)[0, :, 0]
+    edges = np.arange(count + 1) * thickness / count
+    rewind = np.diff(np.exp(-1j * k * edges) / (-1j * k)) / (thickness / count)
+    assert (late * rewind).sum() / thickness == pytest.approx(4 / np.pi**2, rel=1e-9)

@@ -6,15 +6,20 @@ from dataclasses import replace
 
 import numpy as np
 import pytest
+from click.testing import CliRunner
 
+from recon.cli.reconstruct import verb as reconstruct_verb
+from recon.cli.simulate import verb as simulate_verb
 from recon.demo import instrument
-from recon.errors import InputWarning
+from recon.errors import InputError, InputWarning
 from recon.forward.diffusing import DiffusingOperator
 from recon.forward.diffusing_model import DiffusingModel
 from recon.grid import Grid
 from recon.priors import NonNegative, TotalVariation
 from recon.protocol import Protocol, SpectralAxis
 from recon.reconstruct import reconstruct
+from recon.record import Record
+from recon.result import load_result
 from recon.simulate import NoNoise, SimulationOptions, simulate
 from recon.simulate.diffusing import Walk
 from recon.solvers.penalised import Penalised
@@ -174,3 +179,22 @@ def test_indirect_axis_does_not_diffuse():
 def test_cube_warns_that_it_cannot_follow_diffusion(standing_record):
     with pytest.warns(InputWarning, match="a cube cannot follow it"):
         reconstruct(standing_record, ComplexCube(), Ridge())
+
+
+def test_command_line_carries_diffusion(standing_record, tmp_path):
+    """The same records and amounts through the verbs."""
+    standing_record.protocol.save(tmp_path / "protocol.h5")
+    apparatus().to_toml(tmp_path / "sensor.toml")
+    flat_specimen().save(tmp_path / "specimen.toml")
+    run = CliRunner().invoke
+    files = [str(tmp_path / name) for name in ("specimen.toml", "sensor.toml", "protocol.h5")]
+    record, result = str(tmp_path / "record.h5"), str(tmp_path / "result.h5")
+    choice = ["--diffusion", "standing"]
+    made = run(simulate_verb, [*files, "-o", record, "--seed", "2", *choice])
+    assert made.exit_code == 0, made.output
+    np.testing.assert_allclose(seen(Record.open(record)), seen(standing_record), rtol=1e-5)
+    done = run(reconstruct_verb, [record, "-o", result, "--replicas", "0", *choice])
+    assert done.exit_code == 0, done.output
+    assert relative_error(load_result(result).values).max() < 0.13
+    refused = run(reconstruct_verb, [record, "--cube", *choice])
+    assert isinstance(refused.exception, InputError)

@@ -9,6 +9,8 @@ from contextlib import contextmanager
 
 import click
 
+from recon.spreading import FreeDiffusion, Spreading, StandingMap
+
 EVERY = 0.2
 WIDTH = 78
 
@@ -58,3 +60,14 @@ def progress_line() -> Iterator[ProgressLine]:
         yield line
     finally:
         line.clear()
+
+
+SPREADINGS: dict[str, Spreading] = {"free": FreeDiffusion(), "standing": StandingMap()}
+
+diffusion_option = click.option(
+    "--diffusion",
+    type=click.Choice([*SPREADINGS]),
+    default=None,
+    help="What molecules do to patterns while they are listened to: carry amount and phase away "
+    "(free), or phase only within a map that stays (standing). By default they stand still.",
+)

@@ -7,7 +7,7 @@ from pathlib import Path
 import click
 import numpy as np
 
-from recon.cli.common import progress_line
+from recon.cli.common import SPREADINGS, diffusion_option, progress_line
 from recon.errors import InputError
 from recon.forward.channels import Channels
 from recon.priors import (
@@ -65,6 +65,7 @@ RIDGE = "ridge"
 @click.option(
     "--off-lattice", is_flag=True, help="Take wavevectors as stated, not on the grid's lattice."
 )
+@diffusion_option
 @click.option("--memory-limit-gib", type=float, default=8.0, show_default=True)
 def verb(
     record: Path,
@@ -75,10 +76,11 @@ def verb(
     replicas: int,
     channel_gain: Path | None,
     off_lattice: bool,
+    diffusion: str | None,
     memory_limit_gib: float,
 ) -> None:
     """Amounts of the RECORD's species in mM, or its complex cube, with standard errors."""
-    unknown: Unknown = ComplexCube() if cube else SpeciesAmounts()
+    unknown = unknown_named(cube, diffusion)
     names = priors or (("joint-total-variation" if cube else "total-variation"),)
     with progress_line() as line:
         result = reconstruct(
@@ -92,6 +94,21 @@ def verb(
     assert isinstance(result, (SpeciesMaps, Cube))
     result.save(output)
     click.echo(f"{output}: {summary(result)}")
+
+
+def unknown_named(cube: bool, diffusion: str | None) -> Unknown:
+    """The cube, or amounts with or without diffusion in their model.
+
+    Raises
+    ------
+    InputError
+        Diffusion is wanted for a cube, whose components have no species.
+    """
+    if not cube:
+        return SpeciesAmounts(spreading=SPREADINGS[diffusion] if diffusion else None)
+    if diffusion:
+        raise InputError("a cube knows no species that diffuse", "--diffusion", "leave out --cube")
+    return ComplexCube()
 
 
 def reality_of(channel_gain: Path | None, off_lattice: bool) -> Reality | None:

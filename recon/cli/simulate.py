@@ -6,7 +6,7 @@ from pathlib import Path
 
 import click
 
-from recon.cli.common import progress_line
+from recon.cli.common import SPREADINGS, diffusion_option, progress_line
 from recon.instrument import Instrument
 from recon.protocol import Protocol
 from recon.simulate import SimulationOptions, simulate
@@ -25,14 +25,22 @@ from recon.specimen import Specimen
     default=0.0,
     help="Relative standard deviation of every wavevector component.",
 )
+@diffusion_option
 def verb(
-    specimen: Path, instrument: Path, protocol: Path, output: Path, seed: int, jitter: float
+    specimen: Path,
+    instrument: Path,
+    protocol: Path,
+    output: Path,
+    seed: int,
+    jitter: float,
+    diffusion: str | None,
 ) -> None:
     """Measure a described SPECIMEN with a described INSTRUMENT by the shots of PROTOCOL.
 
     The model is finer than the voxel grid and independent of the one that reconstructs.
     """
     table = Protocol.load(protocol)
+    spreading = SPREADINGS[diffusion] if diffusion else None
     apparatus = Instrument.from_toml(instrument)
     table.check_reach(apparatus)
     with progress_line() as line:
@@ -40,7 +48,7 @@ def verb(
             Specimen.from_toml(specimen),
             apparatus,
             table,
-            options=SimulationOptions(wavevector_jitter=jitter),
+            options=SimulationOptions(wavevector_jitter=jitter, spreading=spreading),
             seed=seed,
             progress=line.counted("simulating shots"),
             path=output,

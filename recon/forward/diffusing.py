@@ -12,7 +12,7 @@ from numpy.typing import NDArray
 from recon.errors import InputError
 from recon.forward.block_matrix import BlockMatrix
 from recon.forward.blocks import BlockQuadratic
-from recon.forward.diffusing_model import DiffusingModel, Responses
+from recon.forward.diffusing_model import KEPT_BYTES, DiffusingModel, Responses
 from recon.forward.layout import Layout
 from recon.forward.operator import fold
 from recon.forward.statistics import squared_norm
@@ -156,6 +156,19 @@ def _aliased(operator: DiffusingOperator, layout: Layout) -> ComplexArray:
         gathered = np.stack([layout.gather(one) for one in turned]).transpose(2, 3, 0, 1)
         normal += np.matmul(gathered.conj().swapaxes(-1, -2), gathered)
     return normal.transpose(2, 3, 0, 1)
+
+
+def joint_memory(model: DiffusingModel) -> int:
+    """Bytes that `accumulate_joint` takes at its peak, roughly: blocks, products, responses."""
+    nz, ny, nx = model.base.grid.shape
+    size = model.components * nz
+    responses = Responses(model, np.dtype(np.complex64))
+    shots = range(len(model.group))
+    times = 1 if all(responses.alike(shot) for shot in shots) else model.times
+    kernel = 8 * times * size * ny * nx
+    kinds = len({responses.key(shot) for shot in shots})
+    kept = min(KEPT_BYTES, 2 * (kinds - 1) * kernel)
+    return 8 * size**2 * ny * nx * 6 + 4 * kernel + kept
 
 
 @dataclass(frozen=True)

@@ -179,7 +179,7 @@ class Responses:
     def key(self, shot: int) -> tuple[object, ...]:
         """Shots of equal key have equal kernels."""
         model, encoding = self.model, self.model.base.encoding
-        apart = model.spreading.standing and self._alike(shot)
+        apart = model.spreading.standing and self.alike(shot)
         knows = model.spreading.knows_wound(model.pulse) and not apart
         wound = tuple(encoding.nuclear[shot]) if knows else ()
         return (*self.tables.keys[shot], int(model.group[shot]), *wound)
@@ -188,14 +188,14 @@ class Responses:
         """The response; the kernel is kept for shots to come."""
         model = self.model
         course = np.ones((model.times, model.components), self.dtype)
-        if self._alike(shot):
+        if self.alike(shot):
             course = model.bases[model.group[shot]].astype(self.dtype)
             if model.spreading.standing:
                 left = [self._left(shot, place)[:, 0, 0] for place in range(model.components)]
                 course = (course * np.stack(left, axis=1)).astype(self.dtype)
         return Response(course, self._keep(self.key(shot), lambda: self._kernel(shot)))
 
-    def _alike(self, shot: int) -> bool:
+    def alike(self, shot: int) -> bool:
         """All samples of the shot see the layers alike."""
         times = self.model.wound_times[self.model.group[shot]]
         still = self.model.spreading.standing and self.model.base.encoding.axial[shot] == 0
@@ -225,7 +225,7 @@ class Responses:
         if not base.is_one_detector:
             sheet = sheet * self.tables.transfer(shot)
         group, axial = int(model.group[shot]), float(encoding.axial[shot])
-        parts, alike = [], self._alike(shot)
+        parts, alike = [], self.alike(shot)
         for place, diffusion in enumerate(model.diffusion):
             layers = self._layers(rows, columns, axial, float(diffusion), group)
             course = sheet[None]

@@ -121,20 +121,22 @@ def wound_layers(
     lower = np.arange(count) * edge
     along = np.asarray(wavenumber - 1j * axial_wavenumber, np.complex128)
     start = np.exp(-np.outer(lower, along)) * decay_integral(along, edge)
+    seen = np.tile(start, (len(spread), 1, 1))
+    if standing and axial_wavenumber == 0:
+        return seen
     modes = np.arange(MODES, dtype=float)
-    seen_through = np.asarray(wavenumber, np.complex128)
-    wound_by = np.array([-1j * axial_wavenumber])
+    seen_through = np.asarray(wavenumber, np.complex128)[:, None]
+    wound_by = np.array([[-1j * axial_wavenumber]])
     layer, slab = (seen_through, wound_by) if standing else (wound_by, seen_through)
-    inside = mode_overlap(layer[:, None, None], modes[:, None], lower, edge, thickness)
-    whole = mode_overlap(slab[:, None], modes, 0.0, thickness, thickness)
+    whole = mode_overlap(slab, modes, 0.0, thickness, thickness)
     whole = whole * (np.where(modes == 0, 1, 2) / thickness)
-    rate = np.outer(spread, (modes * np.pi / thickness) ** 2)
-    seen = np.empty((len(spread), count, len(wavenumber)), complex)
-    for place, exponent in enumerate(rate):
-        late = exponent[-1] > ENOUGH
-        left = np.exp(-exponent) if late else np.expm1(-exponent)
-        product = np.matmul((whole * left)[:, None], inside)[:, 0]
-        seen[place] = product.T if late else start + product.T
+    exponent = np.outer((modes * np.pi / thickness) ** 2, spread)
+    late = exponent[-1] > ENOUGH
+    left = np.where(late, np.exp(-exponent), np.expm1(-exponent)).astype(complex)
+    seen[late] = 0
+    for place, low in enumerate(lower):
+        overlap = whole * mode_overlap(layer, modes, low, edge, thickness)
+        seen[:, place] += (overlap @ left).T
     return seen
 
 
