@@ -179,6 +179,21 @@ def test_axial_wavenumbers_by_hand():
     assert axial_wavenumbers(planning.GRID, made.model_copy(update={"gradients": still})) == (0.0,)
 
 
+@pytest.mark.parametrize("criterion", [MeanError(), WorstError()])
+def test_lazy_scoring_loses_nothing(criterion):
+    """Against scoring every kind in every step."""
+    setting = planning.experiment(species=planning.SPECIES)
+    kinds = camera_kinds((1, 2), axial_wavenumbers(planning.GRID, setting.instrument))
+    candidates = Candidates.of(planning.GRID, setting.instrument, kinds)
+    lazy, eager = (
+        Choice(criterion, rescore_all_every=n).choose(
+            setting, candidates, planning.TIMES, Budget(shots=40)
+        )
+        for n in (16, 1)
+    )
+    assert lazy.value <= 1.002 * eager.value
+
+
 def test_region_counts_by_its_planes():
     region = np.zeros(planning.GRID.shape, bool)
     region[1, 2:4, 3] = True

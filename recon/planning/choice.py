@@ -28,6 +28,7 @@ Progress = Callable[[int, int], None]
 
 REFRESH = 32
 FEW = 4
+LAZY = 2
 
 
 class Criterion(Interface):
@@ -115,6 +116,8 @@ class Choice:
         Candidates evaluated exactly in every step.
     exchanges
         Most exchanges after the greedy pass.
+    rescore_all_every
+        Steps between two scorings of all kinds; 1 for always.
     seed
         Breaks ties; the same seed gives the same table.
     """
@@ -122,6 +125,7 @@ class Choice:
     criterion: Criterion = field(default_factory=MeanError)
     shortlist: int = 2
     exchanges: int = 0
+    rescore_all_every: int = 16
     seed: int = 0
 
     def choose(
@@ -202,6 +206,8 @@ class _Search:
         random = np.random.default_rng(settings.seed)
         self.tie = 1 + 1e-9 * random.random(candidates.allowed.shape)
         self.shortest = float(candidates.seconds[candidates.allowed].min())
+        self.rates: FloatArray = np.full(candidates.allowed.shape, -np.inf)
+        self.steps = 0
         self.pairs: list[Pair] = []
         self.course: list[float] = []
         self.spent = 0.0
@@ -225,10 +231,9 @@ class _Search:
         """Of the candidates that fit, the one with the largest fall per second."""
         variance = self.information.depth_variance()
         self.information.depth_weights = self.settings.criterion.weights(variance)
-        rates: FloatArray = self.scores.falls(self.information) * self.tie
-        rates /= self.candidates.seconds
+        rates = self.score()
         if np.isfinite(room):
-            rates[self.candidates.seconds > room] = -np.inf
+            rates = np.where(self.candidates.seconds > room, -np.inf, rates)
         flat = rates.ravel()
         few = min(self.settings.shortlist, int(np.isfinite(flat).sum()))
         top = np.argpartition(flat, -few)[-few:]
@@ -238,6 +243,29 @@ class _Search:
             fall = self.information.fall(pair)
             found.append((fall / self.candidates.seconds[pair], pair))
         return max(found)[1]
+
+    def score(self) -> FloatArray:
+        """First-order falls per second of all candidates, (kinds, lattice).
+
+        Falls shrink as shots are added, nearly always; so a kind whose last known best lies below
+        a new one need not be scored again (lazy greedy; Minoux, 1978). Now and then all are.
+        """
+        score = self.scores.against(self.information)
+        kinds = np.arange(len(self.candidates.kinds))
+        old = np.ones(len(kinds), bool)
+        if self.steps % self.settings.rescore_all_every:
+            first = [int(np.argmax(self.rates.max(axis=1)))]
+        else:
+            first = kinds.tolist()
+        self.steps += 1
+        while first:
+            some = np.array(first)
+            self.rates[some] = score(some) * self.tie[some] / self.candidates.seconds[some]
+            old[some] = False
+            best = self.rates.max(axis=1)
+            ahead = np.flatnonzero(old & (best > best[~old].max()))
+            first = ahead[np.argsort(best[ahead])[-LAZY:]].tolist()
+        return self.rates
 
     def put(self, pair: Pair) -> None:
         """Add a shot."""

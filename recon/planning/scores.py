@@ -10,6 +10,8 @@ products of the kind's field f with B, one per unwrapped offset o; −o is the c
 
 from __future__ import annotations
 
+from collections.abc import Callable
+
 import numpy as np
 import scipy.fft
 from numpy.typing import NDArray
@@ -18,6 +20,7 @@ from recon.planning.information import Information
 
 ComplexArray = NDArray[np.complexfloating]
 FloatArray = NDArray[np.floating]
+IntArray = NDArray[np.integer]
 
 Offset = tuple[int, int]
 
@@ -50,19 +53,34 @@ class Scores:
 
     def falls(self, information: Information) -> FloatArray:
         """Approximate fall of the criterion for every candidate, (kinds, lattice)."""
-        slope = information.slope()
-        found = np.empty(self.candidates.allowed.shape)
+        return self.against(information)(np.arange(len(self.candidates.kinds)))
+
+    def against(self, information: Information) -> Callable[[IntArray], FloatArray]:
+        """The same for some kinds only, (those kinds, lattice), with the work they share done."""
+        slope, spectra = information.slope(), information.spectra
         kinds = self.candidates.kinds
-        spectra = information.spectra
         places = np.array([spectra.place(kind.evolution_s) for kind in kinds])
-        for place in np.unique(places):
-            factor = spectra.factors[place]
-            seen = self._contracted(slope, factor)
-            rows = np.flatnonzero(places == place)
+        gain = 0.5 * self.responses.weight * information.share
+        seen: dict[int, ComplexArray] = {}
+
+        def prepared(place: int) -> ComplexArray:
+            if place not in seen:
+                blocks = self._contracted(slope, spectra.factors[place])
+                one = self.responses.one_detector
+                seen[place] = blocks if one else self._weight_spectrum(blocks)
+            return seen[place]
+
+        def of(some: IntArray) -> FloatArray:
+            found = np.empty((len(some), self.candidates.allowed.shape[1]))
             part = self._detector if self.responses.one_detector else self._camera
-            found[rows] = part(seen, self.responses.field_of_kind[rows])
-        scale = 0.5 * self.responses.weight * information.share * self.candidates.gain
-        return np.where(self.candidates.allowed, scale * found, -np.inf)
+            for place in np.unique(places[some]):
+                rows = np.flatnonzero(places[some] == place)
+                fields = self.responses.field_of_kind[some[rows]]
+                found[rows] = part(prepared(int(place)), fields)
+            found *= gain * self.candidates.gain[some]
+            return np.where(self.candidates.allowed[some], found, -np.inf)
+
+        return of
 
     def _contracted(self, slope: ComplexArray, factor: ComplexArray) -> ComplexArray:
         """Lᴴ B L and Lᴴ conj(B) L over modes, (2, blocks, aliases, nz, aliases, nz).
@@ -104,11 +122,13 @@ class Scores:
         rows, columns, twice = _entries(nz, offset)
         return (field[rows] * moved[columns].conj()) * twice[:, None, None]
 
-    def _camera(self, seen: ComplexArray, fields: NDArray[np.integer]) -> FloatArray:
-        _, ny, nx = self.candidates.grid.shape
+    def _weight_spectrum(self, seen: ComplexArray) -> ComplexArray:
+        """Spectrum of the weights at −κ', over which the correlation runs."""
         parts = np.concatenate([self._weights(seen, offset) for offset in self._offsets])
-        # the correlation runs over −κ': conj FFT of the conjugate
-        spectrum = scipy.fft.fft2(parts.conj(), workers=2).conj()
+        return np.asarray(scipy.fft.fft2(parts.conj(), workers=2).conj())
+
+    def _camera(self, spectrum: ComplexArray, fields: IntArray) -> FloatArray:
+        _, ny, nx = self.candidates.grid.shape
         rows = (self.candidates.steps[:, 0] + ny // 2 - ny) % (2 * ny)
         columns = (self.candidates.steps[:, 1] + nx // 2 - nx) % (2 * nx)
         falls = np.empty((len(fields), len(rows)))
@@ -138,7 +158,7 @@ class Scores:
         tall *= self.responses.footprint * moved
         return tall
 
-    def _detector(self, seen: ComplexArray, fields: NDArray[np.integer]) -> FloatArray:
+    def _detector(self, seen: ComplexArray, fields: IntArray) -> FloatArray:
         _, ny, nx = self.candidates.grid.shape
         steps = self.candidates.steps
         falls = np.empty((len(fields), len(steps)))
