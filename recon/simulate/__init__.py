@@ -119,16 +119,8 @@ def simulate(
         options.wavevector_jitter,
         seed,
     )
-    _check_memory(scene, in_file=path is not None, limit=options.memory_limit_gib * 2**30)
-    courses = _time_courses(specimen, instrument, protocol)
-    if options.spreading is None:
-        images = species_images(scene, progress)
-        strongest = float(np.abs(images).sum(axis=1).max())
-        fields = _fields(images, courses, protocol)
-    else:
-        diffusion = np.array([one.diffusion for one in specimen.species])
-        moving = diffusing_fields(scene, courses, diffusion, options.spreading, progress)
-        strongest, fields = float(np.abs(moving).max()), iter(moving)
+    _check_memory(scene, options, in_file=path is not None)
+    fields, strongest = _true_fields(scene, specimen, options.spreading, progress)
     if isinstance(options.photon_noise, PoissonNoise):
         _warn_if_not_linear(strongest, instrument.readout)
     description = specimen.description_json()
@@ -145,6 +137,19 @@ def simulate(
     return Record.open(path)
 
 
+def _true_fields(
+    scene: Scene, specimen: Specimen, spreading: Spreading | None, progress: Progress | None
+) -> tuple[Iterator[Samples], float]:
+    """Field (times, cy, cx) of one shot after the other, and the strongest there can be, T."""
+    courses = _time_courses(specimen, scene.instrument, scene.protocol)
+    if spreading is None:
+        images = species_images(scene, progress)
+        return _still(images, courses, scene.protocol), float(np.abs(images).sum(axis=1).max())
+    diffusion = np.array([one.diffusion for one in specimen.species])
+    fields = diffusing_fields(scene, courses, diffusion, spreading, progress)
+    return iter(fields), float(np.abs(fields).max())
+
+
 def _time_courses(
     specimen: Specimen, instrument: Instrument, protocol: Protocol
 ) -> NDArray[np.complex64]:
@@ -159,7 +164,7 @@ def _time_courses(
     return np.asarray(courses).transpose(0, 2, 1).astype(np.complex64)
 
 
-def _fields(
+def _still(
     images: Samples, courses: NDArray[np.complex64], protocol: Protocol
 ) -> Iterator[Samples]:
     """True field (times, cy, cx) of one shot after the other, patterns standing still."""
@@ -192,7 +197,7 @@ def _warn_if_not_linear(field: float, readout: Readout) -> None:
         )
 
 
-def _check_memory(scene: Scene, *, in_file: bool, limit: float) -> None:
+def _check_memory(scene: Scene, options: SimulationOptions, *, in_file: bool) -> None:
     """Refuse, before anything large is taken, what would pass the memory limit."""
     plane = 8 * int(np.prod(scene.padded))
     species, shots = len(scene.magnetisation), len(scene.protocol)
@@ -203,6 +208,10 @@ def _check_memory(scene: Scene, *, in_file: bool, limit: float) -> None:
     channels = int(np.prod(scene.instrument.detector.channels()))
     held = species + (0 if in_file else len(scene.protocol.sample_times))
     need = plane * (nodes + 12 + 5 * species) + 8 * shots * channels * held
+    if options.spreading is not None:
+        layers, times = len(scene.grid.heights), len(scene.protocol.sample_times)
+        need += 3 * plane * layers * (1 + species) + 8 * shots * channels * times
+    limit = options.memory_limit_gib * 2**30
     if need > limit:
         raise InputError(
             f"needs {need / 2**30:.1f} GiB, the limit is {limit / 2**30:.1f} GiB",
