@@ -219,7 +219,9 @@ def draw(path: str, detector, camera, tables, grids) -> None:
         for panel, (name, result) in zip(panels[1], tables.items(), strict=True):
             shots = result["shots"] * np.array(result["factors"])
             means, spreads = np.array(result["separate"]).T
-            panel.errorbar(shots, means, spreads, label="k and q chosen separately", **line(0))
+            panel.errorbar(
+                shots, means, spreads, label="the same k and q, paired at random", **line(0)
+            )
             panel.plot(
                 shots[:1], [result["together"]], label="together", **line(1) | {"linestyle": "none"}
             )
