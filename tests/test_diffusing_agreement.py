@@ -71,7 +71,7 @@ def seen(record):
 def test_simulated_walks_agree_with_the_operator(spreading):
     """Within what the grid itself loses; a still model is off by many times that."""
     table = replace(Protocol.plain(WAVES, np.zeros((3, 2)), 1, TIMES), encoding_duration=0.8e-3)
-    options = SimulationOptions(photon_noise=NoNoise(), axial_refinement=4, spreading=spreading)
+    options = SimulationOptions(photon_noise=NoNoise(), axial_refinement=2, spreading=spreading)
     truth = specimen()
     measured = seen(simulate(truth, apparatus(), table, options=options))
     model = DiffusingModel.build(GRID, apparatus(), table, PAIR, 1e-9, spreading)
