@@ -73,6 +73,9 @@ class Protocol:
     encoding_duration
         Length of the nuclear gradient's pulse, seconds, the same for all shots. Sample times count
         it in. 0 neglects what diffuses during the pulse.
+    sample_duration
+        Time over which a sample is averaged, centred on its sample time, seconds. 0 neglects what
+        the signal does meanwhile.
     spectral_axis
         How the spectral axis is sampled.
     reference_shift_ppm
@@ -94,6 +97,7 @@ class Protocol:
     sample_times: NDArray[np.float64]
     evolution_time: NDArray[np.float64] = field(default_factory=lambda: np.zeros(0))
     encoding_duration: float = 0.0
+    sample_duration: float = 0.0
     spectral_axis: SpectralAxis = SpectralAxis.LISTEN_AFTER_ENCODING
     reference_shift_ppm: float = REFERENCE_SHIFT_PPM
 
@@ -153,8 +157,9 @@ class Protocol:
         times = self.sample_times
         if times.size == 0 or times[0] < 0 or (np.diff(times) <= 0).any():
             raise InputError("sample_times must ascend from 0 s or later", KIND)
-        if not 0 <= self.encoding_duration < np.inf:
-            raise InputError("encoding_duration must not be negative", KIND)
+        for name in ("encoding_duration", "sample_duration"):
+            if not 0 <= getattr(self, name) < np.inf:
+                raise InputError(f"{name} must not be negative", KIND)
         if self.listens and times[0] + self.evolution_time.min() < self.encoding_duration:
             raise InputError(
                 f"the first sample at {times[0] * 1e3:g} ms lies within the encoding pulse",

@@ -8,6 +8,8 @@ A record is one HDF5 file of kind "record":
     description     grid, species and notes as JSON, without maps
     noise_sd_T      attribute: standard deviation of one complex sample at one average
     view_um         attribute: field of view (y, x)
+    channel_weight  float32 (channels y, channels x), only where channels differ: inverse noise
+                    variance relative to the stated one, 0 for a channel that is not used
 
 The samples are stored contiguously, so that reading runs at the speed of the file system.
 """
@@ -57,6 +59,9 @@ class Record:
         Standard deviation of one complex sample at one average, tesla: σ² = E|noise|².
     source
         The file, or the samples themselves.
+    channel_weight
+        Inverse noise variance of every channel relative to 1/noise_sd², (channels y, channels x);
+        None where channels are alike.
     """
 
     instrument: Instrument
@@ -64,6 +69,7 @@ class Record:
     description_json: str
     noise_sd: float
     source: Path | Samples
+    channel_weight: NDArray[np.float32] | None = None
 
     @classmethod
     def open(cls, path: Path | str) -> Record:
@@ -86,7 +92,10 @@ class Record:
             noise_sd = _noise(file.attrs.get("noise_sd_T", np.nan), str(path))
             samples = read_dataset(file, "samples", str(path))
             _check_samples(samples.shape, samples.dtype, instrument, protocol, str(path))
-        return cls(instrument, protocol, description, noise_sd, path)
+            weight = None
+            if "channel_weight" in file:
+                weight = _weight(file["channel_weight"][()], instrument, str(path))
+        return cls(instrument, protocol, description, noise_sd, path, weight)
 
     @classmethod
     def from_arrays(
@@ -97,11 +106,13 @@ class Record:
         description_json: str = "",
         *,
         noise_sd: float,
+        channel_weight: NDArray[Any] | None = None,
     ) -> Record:
         """A record in memory; samples (shots, times, channels y, channels x) become complex64."""
         held = np.ascontiguousarray(samples, np.complex64)
         _check_samples(held.shape, held.dtype, instrument, protocol, KIND)
-        return cls(instrument, protocol, description_json, _noise(noise_sd, KIND), held)
+        weight = None if channel_weight is None else _weight(channel_weight, instrument, KIND)
+        return cls(instrument, protocol, description_json, _noise(noise_sd, KIND), held, weight)
 
     def __len__(self) -> int:
         return len(self.protocol)
@@ -196,7 +207,12 @@ class Record:
     def save(self, path: Path | str) -> None:
         """Write the record as a file, atomically."""
         writer = RecordWriter(
-            path, self.instrument, self.protocol, self.description_json, self.noise_sd
+            path,
+            self.instrument,
+            self.protocol,
+            self.description_json,
+            self.noise_sd,
+            channel_weight=self.channel_weight,
         )
         with writer:
             for _, block in self.shots():
@@ -223,10 +239,15 @@ class RecordWriter:
         protocol: Protocol,
         description_json: str,
         noise_sd: float,
+        *,
+        channel_weight: NDArray[Any] | None = None,
     ) -> None:
         self.path = Path(path)
         self.shape = samples_shape(instrument, protocol)
         self.written = 0
+        self._weight = (
+            None if channel_weight is None else _weight(channel_weight, instrument, str(path))
+        )
         self._contents = (instrument, protocol, description_json, _noise(noise_sd, str(path)))
         self._store: AbstractContextManager[StoreFile] | None = None
         self._file: StoreFile | None = None
@@ -241,6 +262,8 @@ class RecordWriter:
             protocol.write(file.create_group("protocol"))
             file.attrs["noise_sd_T"] = noise_sd
             file.attrs["view_um"] = [edge * 1e6 for edge in instrument.view]
+            if self._weight is not None:
+                file.create_dataset("channel_weight", data=self._weight, track_times=False)
             file.create_dataset("samples", self.shape, np.complex64, track_times=False)
             file.check()
         except BaseException as error:
@@ -342,6 +365,18 @@ def _noise(value: Any, where: str) -> float:
     if not (np.isfinite(noise_sd) and noise_sd > 0):
         raise InputError(f"noise_sd {noise_sd} T must be positive", where, "state the noise")
     return noise_sd
+
+
+def _weight(given: NDArray[Any], instrument: Instrument, where: str) -> NDArray[np.float32]:
+    weight = np.asarray(given, np.float32)
+    wanted = instrument.detector.channels()
+    if weight.shape != wanted:
+        raise InputError(f"channel_weight is {weight.shape}, the detector has {wanted}", where)
+    if not np.isfinite(weight).all() or weight.min() < 0 or not weight.any():
+        raise InputError(
+            "channel_weight must be finite, not negative, and not zero all over", where
+        )
+    return weight
 
 
 def _batch(shape: tuple[int, ...]) -> int:

@@ -22,7 +22,7 @@ from pathlib import Path
 import numpy as np
 from numpy.typing import NDArray
 
-from recon.basis import time_course
+from recon.basis import sampled_course
 from recon.errors import InputError, InputWarning
 from recon.instrument import Instrument, Readout
 from recon.physics import photons
@@ -35,7 +35,7 @@ from recon.simulate.scene import Scene
 from recon.specimen import Specimen
 from recon.spreading import Spreading
 
-__all__ = ["NoNoise", "PhotonNoise", "PoissonNoise", "SimulationOptions", "simulate"]
+__all__ = ["NoNoise", "PhotonNoise", "PoissonNoise", "SimulationOptions", "simulate", "true_fields"]
 
 LINEAR_PHASE = 0.3
 """Sensor phase, rad, beyond which the small-signal reading is off by more than 1.5 %."""
@@ -137,6 +137,32 @@ def simulate(
     return Record.open(path)
 
 
+def true_fields(
+    specimen: Specimen,
+    instrument: Instrument,
+    protocol: Protocol,
+    *,
+    options: SimulationOptions | None = None,
+    seed: int = 0,
+    progress: Progress | None = None,
+) -> Iterator[Samples]:
+    """The field (times, channels y, channels x) of one shot after the other, tesla, as `simulate`.
+
+    Raises
+    ------
+    InputError
+        As `simulate`.
+    """
+    options = options or SimulationOptions()
+    protocol.check_reach(instrument)
+    refinement = (options.axial_refinement, options.lateral_refinement)
+    scene = Scene.build(specimen, instrument, protocol, refinement, options.wavevector_jitter, seed)
+    _check_memory(scene, options, in_file=True)
+    fields, strongest = _true_fields(scene, specimen, options.spreading, progress)
+    _warn_if_not_linear(strongest, instrument.readout)
+    return fields
+
+
 def _true_fields(
     scene: Scene, specimen: Specimen, spreading: Spreading | None, progress: Progress | None
 ) -> tuple[Iterator[Samples], float]:
@@ -155,10 +181,7 @@ def _time_courses(
 ) -> NDArray[np.complex64]:
     """φ_s(t) of each evolution time, (evolutions, times, species)."""
     courses = [
-        [
-            time_course(one, instrument, protocol.sample_times + t, protocol.reference_shift_ppm)
-            for one in specimen.species
-        ]
+        [sampled_course(one, instrument, protocol, float(t)) for one in specimen.species]
         for t in protocol.evolutions[0]
     ]
     return np.asarray(courses).transpose(0, 2, 1).astype(np.complex64)

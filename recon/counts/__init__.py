@@ -1,0 +1,14 @@
+"""From photon counts to samples in tesla: records of counts, their import, their conversion."""
+
+from recon.counts.acquisition import Acquisition, Tone
+from recon.counts.conversion import Conversion, convert
+from recon.counts.record import CountsRecord, CountsWriter
+
+__all__ = [
+    "Acquisition",
+    "Conversion",
+    "CountsRecord",
+    "CountsWriter",
+    "Tone",
+    "convert",
+]
