@@ -27,6 +27,8 @@ class Verdict:
         What was found.
     expected, allowance
         What the description says, and how far off it may be.
+    advice
+        What to do if it is further off.
     """
 
     name: str
@@ -35,6 +37,7 @@ class Verdict:
     standard_error: float
     expected: float
     allowance: float
+    advice: str = ""
 
     def __post_init__(self) -> None:
         numbers = (self.estimate, self.standard_error, self.expected, self.allowance)
@@ -57,7 +60,8 @@ class Verdict:
         if self.within:
             return f"{self.name}: {found}, within expectation ({self.expected:.4g} {self.unit})"
         off = self.estimate - self.expected
-        return f"{self.name}: {found}, off by {off:+.3g} {self.unit}"
+        advice = f"; {self.advice}" if self.advice else ""
+        return f"{self.name}: {found}, off by {off:+.3g} {self.unit}{advice}"
 
 
 def verdicts(found: Sequence[Verdict]) -> Figure:

@@ -1,0 +1,1 @@
+"""What is measured and not assumed: estimators with standard errors, and their report."""
