@@ -20,6 +20,7 @@ from recon.forward.general import GeneralOperator
 from recon.forward.general_model import GeneralModel
 from recon.forward.general_statistics import gather
 from recon.forward.grouped import accumulate_grouped, data_term
+from recon.forward.lattice import ROUNDING
 from recon.priors import Frame, NonNegative, Prior, TotalVariation
 from recon.record import Record
 from recon.result import Account, Result
@@ -62,7 +63,8 @@ def reconstruct(
     memory_limit_gib
         The work is refused if it would need more.
     reality
-        What channels, layer and wavevectors really are, where that breaks the blocks.
+        What channels, layer and wavevectors really are, where that breaks the blocks; by default
+        what the record itself says (`Reality.of`).
 
     Raises
     ------
@@ -73,6 +75,7 @@ def reconstruct(
     estimator = estimator or default_estimator(unknown)
     _check_memory(estimate_memory(record, unknown, estimator), memory_limit_gib)
     reading = Reading(record)
+    reality = Reality.of(record) if reality is None else reality
     expand: ComplexArray | None = None
     read: AnyStatistics | None
     whole: Any
@@ -135,6 +138,26 @@ class Reality:
 
     channels: Channels | None = None
     layer: LayerDensity | None = None
+
+    @classmethod
+    def of(cls, record: Record) -> Reality | None:
+        """What a record says of itself: channels that differ, wavevectors off the lattice.
+
+        None if the blocks hold for it.
+        """
+        channels = None
+        if record.channel_weight is not None:
+            weight = record.channel_weight.astype(float)
+            channels = Channels(np.ones(weight.shape, complex), weight)
+        grid, protocol = record.specimen.grid, record.protocol
+        on_lattice = all(
+            np.abs(steps - np.rint(steps)).max(initial=0) <= ROUNDING
+            for steps in (
+                protocol.nuclear_wavevector[:, 1::-1] / np.array(grid.lattice_step),
+                protocol.sensor_wavevector[:, ::-1] / np.array(grid.lattice_step),
+            )
+        )
+        return None if channels is None and on_lattice else cls(channels)
 
     def data_term(
         self, reading: Reading, unknown: Unknown, progress: Progress = silent

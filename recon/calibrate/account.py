@@ -8,8 +8,11 @@ from __future__ import annotations
 from collections.abc import Iterator
 
 import numpy as np
+from numpy.typing import NDArray
 
 from recon.calibrate.calibration import Calibrated
+from recon.calibrate.consistency import ShotFactors
+from recon.calibrate.drift import Drift
 from recon.counts.channel_state import State
 from recon.counts.conversion import Conversion
 from recon.figures.verdicts import Verdict
@@ -18,177 +21,181 @@ from recon.physics.photons import phase_per_field
 GAIN_PERCENT, CHANNELS_PERCENT, NOISE_PERCENT = 10.0, 5.0, 15.0
 PHASE_RAD, JITTER_RAD, COMMON_PERCENT, LIGHT_PERCENT = 0.1, 0.3, 3.0, 10.0
 MAINS_HZ, PICKUP_PPM, LOST_PERCENT, OFFSET_HZ = 0.2, 100.0, 10.0, 5.0
+MEDIAN = 1.2533
+"""Standard error of a median over that of a mean, for normal noise: √(π/2)."""
 
 
 def conversion_verdicts(conversion: Conversion) -> Iterator[Verdict]:
-    """Channels, response, noise, light, pickup, timing."""
-    channels, look, record = conversion.channels, conversion.inspection, conversion.record
-    good = channels.good
-    count = good.size
-    usable = 100 * good.mean()
-    yield Verdict("usable channels", "%", usable, 0.0, 100.0, CHANNELS_PERCENT, _bad(conversion))
-    readout = record.instrument.readout
-    described = readout.contrast / 2 * phase_per_field(readout.sensing_time, readout.efficiency)
-    size = np.abs(channels.response[good]) / described
-    error = np.nan_to_num(channels.response_error[good]) / described
-    yield Verdict(
-        "response to a known field",
-        "% of the description",
-        100 * float(np.median(size)),
-        100 * 1.2533 * float(np.sqrt(np.mean(error**2) / good.sum())),
-        100.0,
-        GAIN_PERCENT,
-        "check contrast, sensing time and efficiency in the description",
-    )
-    if good.sum() > 1:
-        yield Verdict(
-            "spread of the response over channels",
-            "%",
-            100 * float(np.sqrt(max(size.var() - np.mean(error**2), 0)) / size.mean()),
-            100 * float(np.sqrt(np.mean(error**2) / (2 * good.sum()))),
-            0.0,
-            GAIN_PERCENT,
-            "it is corrected; even out the microwave or the light to gain signal at the rim",
-        )
-        phase = np.angle(channels.response[good])
-        spread = np.nan_to_num(channels.response_error[good]) / np.abs(channels.response[good])
-        yield Verdict(
-            "spread of the channels' phase",
-            "rad",
-            float(np.sqrt(max(phase.var() - np.mean(spread**2), 0))),
-            float(np.sqrt(np.mean(spread**2) / (2 * good.sum()))),
-            0.0,
-            PHASE_RAD,
-            "it is corrected; look for microwave inhomogeneity",
-        )
-    contrast = channels.contrast[good]
-    yield Verdict(
-        "contrast",
-        "%",
-        100 * float(np.median(contrast)),
-        100 * 1.2533 * float(contrast.std() / np.sqrt(count)),
-        100 * readout.contrast,
-        GAIN_PERCENT / 100 * 100 * readout.contrast,
-        "check the count offset and the length of the readout",
-    )
-    yield Verdict(
-        "noise of a sample",
-        "% of the description",
-        100 * channels.noise_sd / record.instrument.field_noise,
-        100 / np.sqrt(2 * look.demodulator.freedom * count),
-        100.0,
-        NOISE_PERCENT,
-        "look for read noise, laser noise or fewer photons than described",
-    )
-    yield Verdict(
-        "noise that channels share",
-        "% of its variance",
-        100 * look.common.share,
-        100 * np.sqrt(2.0) / np.sqrt(count) * look.common.share,
-        0.0,
-        COMMON_PERCENT,
-        "it is projected out where that costs nothing; shield the sensor",
-    )
-    yield from _over_the_rows(conversion)
-
-
-def _over_the_rows(conversion: Conversion) -> Iterator[Verdict]:
-    rows, look = conversion.rows, conversion.inspection
-    light = rows.light / rows.light.mean()
-    yield Verdict(
-        "change of the light over the record",
-        "%",
-        100 * float(np.ptp(light)),
-        0.0,
-        0.0,
-        LIGHT_PERCENT,
-        "it is divided out; bleaching and laser drift cost photons",
-    )
-    if look.pickup is not None:
-        amplitude = np.sqrt((np.abs(rows.pickup) ** 2).mean(axis=0)).max()
-        yield Verdict(
-            "frequency of the mains",
-            "Hz",
-            look.pickup.frequency_Hz,
-            look.pickup.standard_error_Hz,
-            conversion.record.instrument and _nominal(look.pickup.frequency_Hz),
-            MAINS_HZ,
-            "state mains_Hz as it is",
-        )
-        yield Verdict(
-            "mains pickup in the light",
-            "ppm",
-            1e6 * float(amplitude),
-            1e6 * float(np.abs(rows.pickup).std() / np.sqrt(len(rows.row))),
-            0.0,
-            PICKUP_PPM,
-            "it is fitted and removed; look for ground loops",
-        )
-    if np.iscomplexobj(rows.tone) and len(rows.row) > 1:
-        phase = np.unwrap(np.angle(rows.tone))
-        yield Verdict(
-            "jitter of the shots' start",
-            "rad of the carrier",
-            float(phase.std(ddof=1)),
-            float(phase.std(ddof=1) / np.sqrt(2 * (len(phase) - 1))),
-            0.0,
-            JITTER_RAD,
-            "it is corrected by the tone; check the trigger",
-        )
-
-
-def _nominal(frequency: float) -> float:
-    return 60.0 if frequency > 55 else 50.0
-
-
-def _bad(conversion: Conversion) -> str:
-    channels = conversion.channels
-    bad = [f"{channels.count(s)} {s.name.lower()}" for s in State if s and channels.count(s)]
-    return f"{', '.join(bad)}: they are left out; clean or replace the camera" if bad else ""
+    """Channels, response, contrast, noise, light, pickup, timing."""
+    yield from _channels(conversion)
+    yield from _response(conversion)
+    yield from _noise(conversion)
+    yield from _light(conversion)
+    yield from _timing(conversion)
 
 
 def record_verdicts(calibrated: Calibrated) -> Iterator[Verdict]:
     """Field offset and drift, phases, polarisation."""
-    drift, factors, decay = calibrated.drift, calibrated.factors, calibrated.decay
-    if drift is not None:
-        weights = 1 / drift.raw_error_Hz**2
-        frequency = calibrated.frequency_Hz
+    if calibrated.drift is not None:
+        yield from _field(calibrated.drift, calibrated.frequency_Hz)
+    if calibrated.factors is not None:
+        yield _phases(calibrated.factors)
+    if calibrated.decay is not None:
+        lost = calibrated.decay.lost
+        advice = "it is carried in the amplitudes; put the shots that matter most first"
+        yield Verdict(lost.name, "%", lost.value, lost.standard_error, 0.0, LOST_PERCENT, advice)
+
+
+def excess(values: NDArray[np.floating], errors: NDArray[np.floating]) -> tuple[float, float]:
+    """Standard deviation of the values beyond their errors, and its standard error."""
+    noise = float(np.mean(errors**2))
+    size = float(np.sqrt(max(float(np.var(values)) - noise, 0.0)))
+    spread = float(np.sqrt((noise + size**2) / (2 * max(values.size, 1))))
+    return size, spread
+
+
+def _channels(conversion: Conversion) -> Iterator[Verdict]:
+    channels = conversion.channels
+    bad = [f"{channels.count(s)} {s.name.lower()}" for s in State if s and channels.count(s)]
+    advice = f"{', '.join(bad)}: they are left out; clean the optics or replace the camera"
+    usable = 100 * float(channels.good.mean())
+    yield Verdict("usable channels", "%", usable, 0.0, 100.0, CHANNELS_PERCENT, advice)
+
+
+def _response(conversion: Conversion) -> Iterator[Verdict]:
+    channels, readout = conversion.channels, conversion.record.instrument.readout
+    good = channels.good
+    described = readout.contrast / 2 * phase_per_field(readout.sensing_time, readout.efficiency)
+    size = np.abs(channels.response[good]) / described
+    error = np.nan_to_num(channels.response_error[good]) / described
+    mean_error = float(np.sqrt(np.mean(error**2) / size.size))
+    advice = "it is corrected; check contrast, sensing time and efficiency in the description"
+    yield Verdict(
+        "response to a known field",
+        "% of the description",
+        100 * float(np.median(size)),
+        100 * MEDIAN * float(np.hypot(mean_error, size.std() / np.sqrt(size.size))),
+        100.0,
+        GAIN_PERCENT,
+        advice,
+    )
+    contrast = 100 * channels.contrast[good]
+    yield Verdict(
+        "contrast",
+        "%",
+        float(np.median(contrast)),
+        MEDIAN * float(contrast.std() / np.sqrt(contrast.size)),
+        100 * readout.contrast,
+        GAIN_PERCENT * readout.contrast,
+        "check the count offset and the length of the readout",
+    )
+    if size.size > 1:
+        spread, spread_error = excess(size, error)
+        advice = "it is corrected; even out microwave and light to gain signal at the rim"
         yield Verdict(
-            "mean offset of the nuclear frequency",
-            "Hz",
-            float((weights * drift.raw_Hz).sum() / weights.sum()),
-            float(1 / np.sqrt(weights.sum())),
-            0.0,
-            OFFSET_HZ,
-            "it is corrected; correct bias_field_mT",
-        )
-        yield Verdict(
-            "drift of the nuclear frequency",
-            "Hz from end to end",
-            float(np.ptp(frequency)),
-            float(np.sqrt(2 * np.median(drift.error_Hz**2))),
-            0.0,
-            OFFSET_HZ,
-            "it is corrected; stabilise the field or its temperature",
-        )
-    if factors is not None:
-        phase, error = factors.phase_rad, factors.error(1)
-        yield Verdict(
-            "scatter of the shots' phase",
-            "rad",
-            float(np.sqrt(max(np.var(phase) - np.mean(error**2), 0))),
-            float(np.sqrt(np.mean(error**2) / (2 * len(phase)))),
-            0.0,
-            PHASE_RAD,
-            "it is corrected; use a tone in step with the shots",
-        )
-    if decay is not None:
-        yield Verdict(
-            decay.lost.name,
+            "spread of the response over channels",
             "%",
-            decay.lost.value,
-            decay.lost.standard_error,
+            100 * spread / float(size.mean()),
+            100 * spread_error,
             0.0,
-            LOST_PERCENT,
-            "it is carried in the amplitudes; put the shots that matter most first",
+            GAIN_PERCENT,
+            advice,
         )
+        phase, phase_error = excess(np.angle(channels.response[good]), error / size)
+        advice = "it is corrected; look for microwaves that differ over the view"
+        yield Verdict(
+            "spread of the channels' phase", "rad", phase, phase_error, 0.0, PHASE_RAD, advice
+        )
+
+
+def _noise(conversion: Conversion) -> Iterator[Verdict]:
+    channels, look, record = conversion.channels, conversion.inspection, conversion.record
+    count = int(channels.good.sum())
+    freedom = look.demodulator.freedom * count
+    yield Verdict(
+        "noise of a sample",
+        "% of the description",
+        100 * channels.noise_sd / record.instrument.field_noise,
+        100 / float(np.sqrt(2 * freedom)),
+        100.0,
+        NOISE_PERCENT,
+        "look for read noise, laser noise, or fewer photons than described",
+    )
+    yield Verdict(
+        "noise that channels share",
+        "% of the variance",
+        100 * look.common.share,
+        100 * look.common.share * float(np.sqrt(2 / max(look.looked_at, 1))),
+        0.0,
+        COMMON_PERCENT,
+        "it is projected out where that costs nothing; shield the sensor",
+    )
+
+
+def _light(conversion: Conversion) -> Iterator[Verdict]:
+    rows, pickup = conversion.rows, conversion.inspection.pickup
+    change = 100 * float(np.ptp(rows.light / rows.light.mean()))
+    advice = "it is divided out; bleaching and laser drift cost photons"
+    name = "change of the light over the record"
+    yield Verdict(name, "%", change, 0.0, 0.0, LIGHT_PERCENT, advice)
+    if pickup is None:
+        return
+    yield Verdict(
+        "frequency of the mains",
+        "Hz",
+        pickup.frequency_Hz,
+        pickup.standard_error_Hz,
+        conversion.acquisition.mains_Hz,
+        MAINS_HZ,
+        "state mains_Hz as it is",
+    )
+    sizes = 1e6 * np.abs(rows.pickup)
+    strongest = int(sizes.mean(axis=0).argmax())
+    yield Verdict(
+        "mains pickup in the light",
+        "ppm",
+        float(sizes[:, strongest].mean()),
+        float(sizes[:, strongest].std() / np.sqrt(len(sizes))),
+        0.0,
+        PICKUP_PPM,
+        "it is fitted and removed; look for ground loops",
+    )
+
+
+def _timing(conversion: Conversion) -> Iterator[Verdict]:
+    tone = conversion.rows.tone
+    if not np.iscomplexobj(tone) or len(tone) < 2:
+        return
+    jitter = float(np.unwrap(np.angle(tone)).std(ddof=1))
+    error = jitter / float(np.sqrt(2 * (len(tone) - 1)))
+    advice = "it is corrected by the tone; check the trigger"
+    name = "jitter of the shots' start"
+    yield Verdict(name, "rad of the carrier", jitter, error, 0.0, JITTER_RAD, advice)
+
+
+def _field(drift: Drift, frequency: NDArray[np.floating]) -> Iterator[Verdict]:
+    weights = 1 / drift.raw_error_Hz**2
+    yield Verdict(
+        "mean offset of the nuclear frequency",
+        "Hz",
+        float((weights * drift.raw_Hz).sum() / weights.sum()),
+        float(1 / np.sqrt(weights.sum())),
+        0.0,
+        OFFSET_HZ,
+        "it is corrected; correct bias_field_mT",
+    )
+    yield Verdict(
+        "drift of the nuclear frequency",
+        "Hz from end to end",
+        float(np.ptp(frequency)),
+        float(np.sqrt(2 * np.median(drift.error_Hz**2))),
+        0.0,
+        OFFSET_HZ,
+        "it is corrected; stabilise the field or its temperature",
+    )
+
+
+def _phases(factors: ShotFactors) -> Verdict:
+    scatter, error = excess(factors.phase_rad, factors.error(1))
+    advice = "it is corrected; use a tone in step with the shots"
+    return Verdict("scatter of the shots' phase", "rad", scatter, error, 0.0, PHASE_RAD, advice)

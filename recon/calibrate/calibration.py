@@ -1,16 +1,16 @@
 """A record with everything corrected that it tells of itself, and an account of what was found.
 
-Order: each shot's frequency from its own lines; amplitude, phase and what is left of the frequency
-from the shots' agreement; decay of the polarisation from the amplitudes. Samples are turned back by
-the frequencies, the table of shots carries phases and decay. Corrections of single shots are shrunk
-by their own uncertainty, s²/(s² + e²) with s² the variance beyond the errors e, so that noise is not
-written into the record.
+Order: each shot's frequency from its own lines; amplitude, phase and what is left of the
+frequency from the shots' agreement; decay of the polarisation from the amplitudes. Samples are
+turned back by the frequencies, the table of shots carries phases and decay. Corrections of single
+shots are shrunk by their own uncertainty, s²/(s² + e²) with s² the variance beyond the errors e, so
+that noise is not written into the record.
 """
 
 from __future__ import annotations
 
 from collections.abc import Iterator
-from dataclasses import dataclass, replace
+from dataclasses import dataclass, field, replace
 from pathlib import Path
 
 import numpy as np
@@ -44,10 +44,12 @@ class Calibration:
         What is given and not estimated.
     """
 
-    drift: LineDrift | None = LineDrift()
-    shots: ShotConsistency | None = ShotConsistency(frequency=True, rounds=2)
+    drift: LineDrift | None = field(default_factory=LineDrift)
+    shots: ShotConsistency | None = field(
+        default_factory=lambda: ShotConsistency(frequency=True, rounds=2)
+    )
     decay: bool = True
-    fixed: Fixed = Fixed()
+    fixed: Fixed = field(default_factory=Fixed)
 
 
 @dataclass(frozen=True, eq=False)

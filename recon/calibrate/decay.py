@@ -2,7 +2,8 @@
 
 ln a_j = −R t_j + c₀ + c₁ |k_j| + c₂ |k_j|² + error, t_j the clock's time. The wavenumber's terms
 take up what the assumed smoothness and the voxel's size do to shots of high wavenumber. The
-errors' size is taken from the scatter about the fit where that is larger than stated (Birge, Phys. Rev. 40:207, 1932).
+errors' size is taken from the scatter about the fit where that is larger than stated (Birge,
+Phys. Rev. 40:207, 1932).
 """
 
 from __future__ import annotations

@@ -8,8 +8,11 @@ import warnings
 import click
 
 from recon.cli import (
+    calibrate,
+    convert,
     demo,
     hand_over,
+    import_counts,
     make_protocol,
     make_specimen,
     plan,
@@ -29,6 +32,9 @@ VERBS = (
     plan.verb,
     what_if.verb,
     simulate.verb,
+    import_counts.verb,
+    convert.verb,
+    calibrate.verb,
     reconstruct.verb,
     quantify.verb,
     report.verb,

@@ -9,6 +9,7 @@ import click
 import numpy as np
 
 from recon.cli.reconstruct import summary
+from recon.counts.record import CountsRecord, holds_counts
 from recon.errors import InputError
 from recon.grid import Grid
 from recon.instrument import Instrument
@@ -42,13 +43,14 @@ def description(path: Path) -> str:
         return _instrument(Instrument.from_toml(path))
     kinds: dict[str, Callable[[Path], str]] = {
         "protocol": lambda p: _protocol(Protocol.load(p)),
+        "counts": lambda p: _counts(CountsRecord.open(p)),
         "record": lambda p: _record(Record.open(p)),
         MAPS: lambda p: (
             f"species maps on {_grid(SpeciesMaps.load(p).grid)}\n" + summary(SpeciesMaps.load(p))
         ),
         CUBE: lambda p: _cube(Cube.load(p)),
     }
-    kind = store_kind(path)
+    kind = "counts" if holds_counts(path) else store_kind(path)
     if kind not in kinds:
         raise InputError(f"holds a {kind}, which has nothing to show", str(path))
     return kinds[kind](path)
@@ -101,6 +103,16 @@ def _protocol(protocol: Protocol) -> str:
             f"  digest {protocol.digest()[:16]}",
         ]
     )
+
+
+def _counts(record: CountsRecord) -> str:
+    frames, rows, columns = record.row_shape
+    lines = [
+        f"photon counts: {len(record)} rows of {frames} frames, {rows} x {columns} channels, "
+        f"{record.nbytes / 1e6:.1f} MB of {record.dtype}",
+        f"  {len(np.unique(record.shot))} of {len(record.protocol)} shots measured",
+    ]
+    return "\n".join([*lines, *([f"  {record.cut}"] if record.cut else [])])
 
 
 def _record(record: Record) -> str:

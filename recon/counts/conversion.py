@@ -15,6 +15,7 @@ from pathlib import Path
 import numpy as np
 from numpy.typing import NDArray
 
+from recon.counts.acquisition import Acquisition
 from recon.counts.channel_state import ChannelState, judge
 from recon.counts.findings import Finding, inspect_rows
 from recon.counts.inspection import Inspection, inspect
@@ -67,6 +68,8 @@ class Conversion:
     ----------
     record
         Samples in tesla of every measured shot; its sample times are the windows' centres.
+    acquisition
+        How the counts were taken.
     shots
         Which shots of the counts' protocol it holds.
     channels
@@ -80,6 +83,7 @@ class Conversion:
     """
 
     record: Record
+    acquisition: Acquisition
     shots: NDArray[np.intp]
     channels: ChannelState
     rows: RowTable
@@ -118,7 +122,7 @@ def convert(
         pattern = _pattern(look, channels) if settings.common_noise else None
         blocks = _in_tesla(scratch, shots, channels, pattern, protocol, counts, progress)
         record = _written(path, counts, protocol, channels, blocks)
-    return Conversion(record, shots, channels, table, look, tuple(findings))
+    return Conversion(record, counts.acquisition, shots, channels, table, look, tuple(findings))
 
 
 def _folder(path: Path | str) -> Path:

@@ -39,6 +39,8 @@ class Inspection:
         Standard deviation of a normalised frame, (channels,).
     common
         Noise that channels share.
+    looked_at
+        Number of frames it rests on.
     """
 
     reference: Reference
@@ -47,6 +49,7 @@ class Inspection:
     level: FloatArray
     noise: FloatArray
     common: CommonNoise
+    looked_at: int
 
     @property
     def contrast(self) -> FloatArray:
@@ -81,9 +84,9 @@ def inspect(
     noise = np.sqrt(power / (len(rows) * demodulator.freedom))
     level = np.mean([row.mean(axis=0, dtype=np.float64) for row in rows], axis=0)
     freedom = demodulator.freedom / len(residuals[0])
-    return Inspection(
-        reference, demodulator, pickup, level, noise, common_noise(residuals, noise, freedom)
-    )
+    common = common_noise(residuals, noise, freedom)
+    frames = sum(len(one) for one in residuals)
+    return Inspection(reference, demodulator, pickup, level, noise, common, frames)
 
 
 def tone_lines(record: CountsRecord) -> tuple[Line, ...]:

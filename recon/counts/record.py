@@ -27,7 +27,7 @@ import numpy as np
 from numpy.typing import NDArray
 
 from recon.counts.acquisition import Acquisition
-from recon.counts.truncated import open_padded, rows_present
+from recon.counts.truncated import open_padded, rows_present, superblock
 from recon.errors import InputError
 from recon.files import write_failure
 from recon.instrument import Instrument
@@ -304,27 +304,45 @@ def _opened(path: Path) -> Iterator[tuple[h5py.File, str]]:
     """The file, and how much of its end is missing."""
     if not path.is_file():
         raise InputError("does not exist", str(path), "give an HDF5 file of counts")
-    cut = ""
+    file, cut = _open(path)
     try:
-        file = h5py.File(path, "r", libver="latest", swmr=True)
-    except OSError as error:
-        text = str(error)
-        if "lock" in text:
-            raise InputError(
-                "is being written by another program", str(path), "wait until that has ended"
-            ) from error
-        if "truncated" in text:
-            file, cut = open_padded(path)
-        else:
-            what = "is not an HDF5 file of counts, or its start is damaged"
-            raise InputError(what, str(path)) from error
-    try:
-        kind = file.attrs.get(KIND_ATTRIBUTE)
+        with reading(str(path)):
+            kind = file.attrs.get(KIND_ATTRIBUTE)
         if kind != KIND:
             raise InputError(f"holds a {kind}, not {KIND}", str(path))
         yield file, cut
     finally:
         file.close()
+
+
+def _open(path: Path) -> tuple[h5py.File, str]:
+    """Open a file that is whole, cut off, or growing; and say what is missing."""
+    head = superblock(path)
+    if head is None:
+        raise InputError("is not an HDF5 file of counts, or its start is damaged", str(path))
+    stated, growing = head
+    if path.stat().st_size < stated and not growing:
+        return open_padded(path, stated)
+    try:
+        return h5py.File(path, "r", libver="latest", swmr=growing), ""
+    except OSError as error:
+        if "lock" in str(error) or "already open" in str(error):
+            raise InputError(
+                "is being written by another program", str(path), "wait until that has ended"
+            ) from error
+        what = "is not an HDF5 file of counts, or is damaged"
+        raise InputError(what, str(path), "copy the file again") from error
+
+
+def holds_counts(path: Path | str) -> bool:
+    """Whether a file is a record of counts, growing or cut off ones included."""
+    try:
+        with _opened(Path(path)):
+            return True
+    except InputError as error:
+        if "another program" in str(error):
+            raise
+        return False
 
 
 def _group(file: h5py.File, path: Path) -> h5py.Group:
@@ -355,8 +373,9 @@ def _whole_rows(file: h5py.File, stated: int, cut: str, path: Path) -> tuple[int
     """How many rows are whole, and what is missing, in words."""
     begun = max(len(file["signal"]), len(file["reference"]))
     whole = min(stated, len(file["signal"]), len(file["reference"]), len(file["clock_time"]))
-    if cut:
-        whole = rows_present(file, whole, path)
+    there = rows_present(file, whole, path)
+    if cut or there < whole:
+        cut, whole = cut or "the file ends early", there
         return whole, f"{cut}; {whole} whole shots are used"
     if begun > whole:
         return whole, f"shot in row {whole} was cut off; {whole} whole shots are used"

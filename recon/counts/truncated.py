@@ -42,21 +42,17 @@ class _Padded(io.RawIOBase):
         super().close()
 
 
-def open_padded(path: Path) -> tuple[h5py.File, str]:
-    """Open a file whose end is missing; also says how much is.
+def open_padded(path: Path, stated: int) -> tuple[h5py.File, str]:
+    """Open a file that should be `stated` bytes long and ends before; also says by how much.
 
     Raises
     ------
     InputError
         Too much is missing.
     """
-    size = path.stat().st_size
+    missing = stated - path.stat().st_size
     try:
-        stated = _stated_size(path)
-        return (
-            h5py.File(_Padded(path, max(stated, size)), "r"),
-            f"the file ends {max(stated - size, 0)} bytes early",
-        )
+        return h5py.File(_Padded(path, stated), "r"), f"the file ends {missing} bytes early"
     except (OSError, RuntimeError, ValueError, KeyError) as error:
         raise InputError(
             "is truncated, and so much is missing that nothing can be read",
@@ -65,13 +61,19 @@ def open_padded(path: Path) -> tuple[h5py.File, str]:
         ) from error
 
 
-def _stated_size(path: Path) -> int:
-    """End-of-file address in the superblock of version 2 or 3 (HDF5 file format, section II.A)."""
+def superblock(path: Path) -> tuple[int, bool] | None:
+    """End-of-file address, and whether a writer has (or had) the file open; None if not HDF5.
+
+    Superblock of version 2 or 3, as the writer makes it (HDF5 file format specification, II.A); of
+    any other version nothing is known, and the file is taken as whole.
+    """
     with path.open("rb") as raw:
         head = raw.read(48)
-    if head[:8] != b"\x89HDF\r\n\x1a\n" or head[8] not in (2, 3) or head[9] != 8:
-        raise ValueError("superblock of another version")
-    return int.from_bytes(head[28:36], "little")
+    if len(head) < 48 or head[:8] != b"\x89HDF\r\n\x1a\n":
+        return None
+    if head[8] not in (2, 3) or head[9] != 8:
+        return 0, False
+    return int.from_bytes(head[28:36], "little"), bool(head[11])
 
 
 def rows_present(file: h5py.File, rows: int, path: Path) -> int:

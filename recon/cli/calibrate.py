@@ -1,0 +1,70 @@
+"""`nearspin calibrate`: what a record tells of the apparatus, and the record corrected by it."""
+
+from __future__ import annotations
+
+import tempfile
+from pathlib import Path
+
+import click
+
+from recon.calibrate.calibration import Calibration, calibrate
+from recon.calibrate.consistency import ShotConsistency
+from recon.calibrate.drift import LineDrift
+from recon.calibrate.fixed import Fixed
+from recon.calibrate.report import all_verdicts, write_report
+from recon.cli.common import progress_line
+from recon.counts.conversion import convert
+from recon.counts.record import CountsRecord, holds_counts
+from recon.record import Record
+
+
+@click.command("calibrate")
+@click.argument("measured", type=click.Path(path_type=Path))
+@click.option("-o", "--output", type=click.Path(path_type=Path), default=Path("calibrated.h5"))
+@click.option(
+    "--report",
+    type=click.Path(path_type=Path),
+    default=Path("calibration"),
+    show_default=True,
+    help="Folder for verdicts, tables and figures.",
+)
+@click.option("--fixed", type=click.Path(path_type=Path), default=None, help="TOML: what is given.")
+@click.option(
+    "--reference-line",
+    multiple=True,
+    help="Species whose line follows the field; by default all of them.",
+)
+@click.option("--without-drift", is_flag=True, help="Do not follow the field.")
+@click.option("--without-shots", is_flag=True, help="Do not compare the shots with each other.")
+def verb(
+    measured: Path,
+    output: Path,
+    report: Path,
+    fixed: Path | None,
+    reference_line: tuple[str, ...],
+    without_drift: bool,
+    without_shots: bool,
+) -> None:
+    """Estimate from MEASURED (counts or a record) what the description only guesses."""
+    settings = Calibration(
+        drift=None if without_drift else LineDrift(tuple(reference_line)),
+        shots=None if without_shots else ShotConsistency(frequency=not without_drift, rounds=2),
+        fixed=Fixed() if fixed is None else Fixed.from_toml(fixed),
+    )
+    with progress_line() as line, tempfile.TemporaryDirectory() as scratch:
+        conversion = None
+        if holds_counts(measured):
+            counts = CountsRecord.open(measured)
+            conversion = convert(counts, Path(scratch) / "record.h5", progress=line)
+            record = conversion.record
+        else:
+            record = Record.open(measured)
+        calibrated = calibrate(record, output, settings, progress=line)
+        line("writing the report", None)
+        written = write_report(report, conversion, calibrated)
+        found = all_verdicts(conversion, calibrated)
+    for one in found:
+        click.echo(f"  {one}")
+    for finding in () if conversion is None else conversion.findings:
+        click.echo(f"note: {finding}")
+    click.echo(f"{output}: calibrated record; report of {len(written)} files in {report}")
