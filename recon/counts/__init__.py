@@ -2,7 +2,8 @@
 
 from recon.counts.acquisition import Acquisition, Tone
 from recon.counts.conversion import Conversion, convert
-from recon.counts.record import CountsRecord, CountsWriter
+from recon.counts.record import CountsRecord
+from recon.counts.writer import CountsWriter
 
 __all__ = [
     "Acquisition",

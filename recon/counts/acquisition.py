@@ -55,7 +55,7 @@ class Acquisition(Description):
     frame_interval_us
         Time between frames.
     frames_per_window
-        Frames that become one complex sample; at least 4.
+        Frames that become one complex sample; at least 6.
     photons_per_count
         Photons that raise the count by one.
     count_offset
@@ -75,7 +75,7 @@ class Acquisition(Description):
     """
 
     frame_interval_us: Positive
-    frames_per_window: Annotated[Count, Field(ge=4)]
+    frames_per_window: Annotated[Count, Field(ge=6)]
     photons_per_count: Positive = 1.0
     count_offset: NotNegative = 0.0
     full_scale_count: Annotated[Count, Field(ge=1)] = 65535

@@ -68,10 +68,10 @@ def common_noise(residuals: Sequence[Frames], noise: FloatArray, freedom: float)
     start = rng.standard_normal(min(stacked.shape)).astype(np.float32)
     _, values, patterns = svds(stacked, k=count, v0=start)
     order = np.argsort(values)[::-1]
-    edge = np.sqrt(freedom) * (np.sqrt(len(stacked)) + np.sqrt(channels))
+    edge = np.sqrt(len(stacked)) + np.sqrt(channels)
     kept = [k for k in order if values[k] > MARGIN * edge]
     held = np.zeros((len(kept), len(noise)))
     for row, k in enumerate(kept):
-        power = values[k] ** 2 / (len(stacked) * freedom) - 1
+        power = values[k] ** 2 / len(stacked) - 1
         held[row, alive] = patterns[k] * np.sqrt(max(power, 0))
     return CommonNoise(held) if kept else none

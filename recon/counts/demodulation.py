@@ -2,12 +2,12 @@
 
 The normalised frames y_f of one channel and shot are modelled as
 
-    y = Σ_m 1_m(f) [c_m + Re B_m cos θ_f + Im B_m sin θ_f] + Σ_k u_k l_k(t_f) + noise,
+    y = Σ_m 1_m(f) [c_m + d_m f + Re B_m cos θ_f + Im B_m sin θ_f] + Σ_k u_k l_k(t_f) + noise,
 
-θ_f = 2π f₀ t_f: a level and a complex sample per window m, and lines l_k (the calibration tone,
-mains pickup) of free amplitude and phase over the shot. Least squares rejects the image exactly,
-whatever the alias, and is indifferent to a level that drifts from window to window. With P_m the
-pseudo-inverse of a window's three columns, M what windows cannot explain, and L the lines,
+θ_f = 2π f₀ t_f: a level, a slope and a complex sample per window m, and lines l_k (the calibration
+tone, mains pickup) of free amplitude and phase over the shot. Least squares rejects the image
+exactly, whatever the alias, and is indifferent to slow drift. With P_m the pseudo-inverse of a
+window's four columns, M what windows cannot explain, and L the lines,
 
     u = (Lᵀ M L)⁻¹ Lᵀ M y,    B = P (y − L u).
 """
@@ -29,7 +29,7 @@ FloatArray = NDArray[np.floating]
 Frames = NDArray[np.float32]
 ComplexArray = NDArray[np.complexfloating]
 
-DISTINCT = 0.05
+DISTINCT = 0.01
 """Share of a line that must remain when windows and other lines have explained what they can."""
 
 
@@ -48,7 +48,7 @@ class Demodulator:
     Attributes
     ----------
     quadratures
-        P without its level rows, float32 (windows, 2, frames per window).
+        The rows of P that give samples, float32 (windows, 2, frames per window).
     lines
         What the lines are.
     to_lines
@@ -56,7 +56,7 @@ class Demodulator:
     leakage
         P L, float32 (windows · 2, 2 lines).
     level
-        Basis of each window, float64 (windows, frames per window, 3).
+        Basis of each window, float64 (windows, frames per window, 4).
     unexplained
         M, float32 (windows, frames per window, frames per window).
     line_columns
@@ -93,7 +93,7 @@ class Demodulator:
             A line cannot be told from the samples or from another line.
         """
         angle = acquisition.frame_angles(instrument, protocol)
-        level = np.stack([np.ones_like(angle), np.cos(angle), np.sin(angle)], axis=-1)
+        level = window_columns(angle)
         inverse = np.linalg.pinv(level)
         columns = line_columns(lines, acquisition, protocol)
         windows, frames = angle.shape
@@ -105,12 +105,12 @@ class Demodulator:
         if len(lines) and remains < DISTINCT:
             raise _blended(lines, normal, columns)
         to_lines = np.linalg.solve(normal, rest.T) if len(lines) else rest.T
-        leakage = (inverse[:, 1:] @ shaped).reshape(2 * windows, -1)
+        leakage = (inverse[:, 2:] @ shaped).reshape(2 * windows, -1)
         variance = np.linalg.inv(normal) if len(lines) else normal
-        own = np.linalg.inv(np.swapaxes(level, 1, 2) @ level)[:, (1, 2), (1, 2)].sum()
+        own = np.linalg.inv(np.swapaxes(level, 1, 2) @ level)[:, (2, 3), (2, 3)].sum()
         extra = float(np.einsum("wk,kl,wl->", leakage, variance, leakage))
         return cls(
-            np.ascontiguousarray(inverse[:, 1:], np.float32),
+            np.ascontiguousarray(inverse[:, 2:], np.float32),
             tuple(lines),
             np.ascontiguousarray(to_lines, np.float32),
             np.ascontiguousarray(leakage, np.float32),
@@ -173,6 +173,13 @@ class Demodulator:
         return windows * (per_window - fitted) - 2 * len(self.lines)
 
 
+def window_columns(angle: FloatArray) -> FloatArray:
+    """Level, slope, cosine and sine of every window, (windows, frames per window, 4)."""
+    frames = angle.shape[1]
+    slope = np.broadcast_to(np.linspace(-1, 1, frames), angle.shape)
+    return np.stack([np.ones_like(angle), slope, np.cos(angle), np.sin(angle)], axis=-1)
+
+
 def line_columns(
     lines: Sequence[Line], acquisition: Acquisition, protocol: Protocol
 ) -> NDArray[np.float64]:
@@ -188,10 +195,10 @@ def line_columns(
 
 def remaining_share(normal: FloatArray, columns: FloatArray) -> float:
     """Least share of any mixture of lines that windows and the other lines do not explain."""
-    return float(np.sqrt(max(_scaled(normal, columns)[0][0], 0))) if normal.size else 1.0
+    return float(np.sqrt(max(shares(normal, columns)[0][0], 0))) if normal.size else 1.0
 
 
-def _scaled(normal: FloatArray, columns: FloatArray) -> tuple[FloatArray, FloatArray]:
+def shares(normal: FloatArray, columns: FloatArray) -> tuple[FloatArray, FloatArray]:
     """Eigenvalues and vectors of the lines' normal matrix relative to the lines' own size."""
     whole = np.sqrt((columns**2).sum(axis=0))
     values, vectors = np.linalg.eigh(normal / np.maximum(np.outer(whole, whole), 1e-30))
@@ -199,7 +206,7 @@ def _scaled(normal: FloatArray, columns: FloatArray) -> tuple[FloatArray, FloatA
 
 
 def _blended(lines: Sequence[Line], normal: FloatArray, columns: FloatArray) -> InputError:
-    line = lines[int(np.argmax(np.abs(_scaled(normal, columns)[1][:, 0]))) // 2]
+    line = lines[int(np.argmax(np.abs(shares(normal, columns)[1][:, 0]))) // 2]
     return InputError(
         f"{line.name} at {line.frequency:.6g} Hz cannot be told from the samples or another "
         "line among these frames",

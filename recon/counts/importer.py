@@ -31,7 +31,8 @@ from pydantic import Field, model_validator
 
 from recon.counts.acquisition import Acquisition
 from recon.counts.plain_files import frames_in
-from recon.counts.record import CountsRecord, CountsWriter, row_shape
+from recon.counts.record import CountsRecord, row_shape
+from recon.counts.writer import CountsWriter
 from recon.errors import InputError
 from recon.instrument import Instrument
 from recon.protocol import Protocol

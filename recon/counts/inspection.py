@@ -17,6 +17,9 @@ from recon.errors import InputError
 Frames = NDArray[np.float32]
 FloatArray = NDArray[np.floating]
 LOOKED_AT = 8
+JITTERS = 4.0
+"""Standard deviations of chi-squared beyond which the tone's phases are said to jitter."""
+
 MEMORY = 2**28
 """Bytes of frames that the first look keeps, at most."""
 
@@ -41,6 +44,10 @@ class Inspection:
         Noise that channels share.
     looked_at
         Number of frames it rests on.
+    tone_weight
+        Weight of each channel's tone in a row's, summing to 1.
+    tone_phase
+        Phase of the tone where all rows share it, rad; None where their starts jitter.
     """
 
     reference: Reference
@@ -50,6 +57,13 @@ class Inspection:
     noise: FloatArray
     common: CommonNoise
     looked_at: int
+    tone_weight: FloatArray
+    tone_phase: float | None
+
+    def turn(self, tone: complex) -> complex:
+        """The factor that undoes the phase of a row whose mean tone is given."""
+        phase = np.angle(tone) if self.tone_phase is None else self.tone_phase
+        return complex(np.exp(-1j * phase))
 
     @property
     def contrast(self) -> FloatArray:
@@ -86,7 +100,30 @@ def inspect(
     freedom = demodulator.freedom / len(residuals[0])
     common = common_noise(residuals, noise, freedom)
     frames = sum(len(one) for one in residuals)
-    return Inspection(reference, demodulator, pickup, level, noise, common, frames)
+    weight = _tone_weight(2 * (1 - level), noise)
+    phase = _shared_phase(rows, demodulator, weight, noise) if tone else None
+    return Inspection(reference, demodulator, pickup, level, noise, common, frames, weight, phase)
+
+
+def _tone_weight(contrast: FloatArray, noise: FloatArray) -> FloatArray:
+    """Contrast over variance, summing to 1."""
+    weight = np.where(noise > 0, np.clip(contrast, 0, 1) / np.maximum(noise, 1e-30) ** 2, 0)
+    total = weight.sum()
+    return np.asarray(weight / total if total > 0 else np.full(len(weight), 1 / len(weight)))
+
+
+def _shared_phase(
+    rows: list[Frames], demodulator: Demodulator, weight: FloatArray, noise: FloatArray
+) -> float | None:
+    """The tone's phase, if the rows' phases differ by no more than noise explains."""
+    tones = np.array([demodulator.apply(row)[1][0] @ weight for row in rows])
+    mean = tones.mean()
+    if len(rows) < 2 or mean == 0:
+        return None
+    spread = np.sqrt(demodulator.line_variance[:2].mean() * (weight**2 * noise**2).sum())
+    scatter = np.sum(np.angle(tones / mean) ** 2) / (spread / abs(mean)) ** 2
+    degrees = len(rows) - 1
+    return float(np.angle(mean)) if scatter < degrees + JITTERS * np.sqrt(2 * degrees) else None
 
 
 def tone_lines(record: CountsRecord) -> tuple[Line, ...]:

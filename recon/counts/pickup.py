@@ -18,11 +18,17 @@ import numpy as np
 from numpy.typing import NDArray
 from scipy.optimize import minimize_scalar
 
-from recon.counts.demodulation import DISTINCT, Line, line_columns, remaining_share
+from recon.counts.demodulation import DISTINCT, Line, line_columns, shares, window_columns
 from recon.counts.record import CountsRecord
 
 FloatArray = NDArray[np.floating]
 REACH_HZ = 0.6
+CLEARLY = 1.2
+"""How much more than the least share must remain of a line, since its frequency still moves."""
+
+FELT = 1e-3
+"""Share of a line from which on it matters for the frequency, though it need not be removed."""
+
 STRONG = 5.0
 """Standard deviations by which the lines must stand out to be believed."""
 
@@ -38,7 +44,7 @@ class Pickup:
     lines
         The multiples that are removed.
     hidden
-        Multiples that windows cannot tell from their own level or sample.
+        Multiples that windows take up themselves.
     """
 
     frequency_Hz: float  # noqa: N815
@@ -50,32 +56,34 @@ class Pickup:
 def find_pickup(record: CountsRecord, traces: FloatArray, others: Sequence[Line]) -> Pickup | None:
     """Mains lines in the channels' mean frames (rows, frames), or None if there are none."""
     search = _Search(record, np.asarray(traces, np.float64), others)
-    nominal = record.acquisition.mains_Hz
-    clear = tuple(h for h in record.acquisition.mains_harmonics if search.is_clear(h * nominal))
-    hidden = tuple(h for h in record.acquisition.mains_harmonics if h not in clear)
+    nominal, asked = record.acquisition.mains_Hz, record.acquisition.mains_harmonics
+    clear = search.clear(nominal, asked, CLEARLY * DISTINCT)
+    felt = search.clear(nominal, asked, FELT)
     if not clear:
         return None
-    grid = nominal + np.linspace(-REACH_HZ, REACH_HZ, 61)
-    energy = [search.energy(f, clear) for f in grid]
-    step = grid[1] - grid[0]
-    best = float(grid[int(np.argmax(energy))])
-    refined = minimize_scalar(
-        lambda f: -search.energy(f, clear), bounds=(best - step, best + step), method="bounded"
-    )
-    frequency = float(refined.x)
-    variance = search.variance(frequency, clear)
-    degrees = 2 * len(clear) * len(traces)
+    frequency, error = _frequency(search, nominal, felt)
+    variance, degrees = search.variance(frequency, felt), 2 * len(clear) * len(traces)
     if search.energy(frequency, clear) / variance < degrees + STRONG * np.sqrt(2 * degrees):
         return None
-    width = step / 8
-    bend = (
-        search.energy(frequency + width, clear)
-        - 2 * search.energy(frequency, clear)
-        + search.energy(frequency - width, clear)
-    ) / width**2
-    error = float(np.sqrt(2 * variance / max(-bend, 1e-300)))
     lines = tuple(Line(f"mains × {h}", h * frequency) for h in clear)
-    return Pickup(frequency, error, lines, hidden)
+    return Pickup(frequency, error, lines, tuple(h for h in asked if h not in clear))
+
+
+def _frequency(search: _Search, nominal: float, multiples: tuple[int, ...]) -> tuple[float, float]:
+    """The mains' frequency and its standard error, Hz."""
+    grid = nominal + np.linspace(-REACH_HZ, REACH_HZ, 61)
+    step = grid[1] - grid[0]
+    best = float(grid[int(np.argmax([search.energy(f, multiples) for f in grid]))])
+    refined = minimize_scalar(
+        lambda f: -search.energy(f, multiples), bounds=(best - step, best + step), method="bounded"
+    )
+    frequency, width = float(refined.x), step / 8
+    here, below, above = (
+        search.energy(frequency + shift, multiples) for shift in (0.0, -width, width)
+    )
+    bend = (above - 2 * here + below) / width**2
+    variance = search.variance(frequency, multiples)
+    return frequency, float(np.sqrt(2 * variance / max(-bend, 1e-300)))
 
 
 class _Search:
@@ -84,16 +92,25 @@ class _Search:
     def __init__(self, record: CountsRecord, traces: FloatArray, others: Sequence[Line]) -> None:
         self._record = record
         angle = record.acquisition.frame_angles(record.instrument, record.protocol)
-        level = np.stack([np.ones_like(angle), np.cos(angle), np.sin(angle)], axis=-1)
-        self._windows, _ = np.linalg.qr(level)
+        self._windows, _ = np.linalg.qr(window_columns(angle))
         self._others = self._basis(self._columns(others)) if others else None
         self._rows = self._project(traces.T)
 
-    def is_clear(self, frequency: float) -> bool:
-        """A line there is not explained by windows or other lines."""
-        columns = self._columns([Line("", frequency)])
+    def clear(self, frequency: float, multiples: tuple[int, ...], least: float) -> tuple[int, ...]:
+        """The multiples of which at least a share remains beside windows and each other."""
+        kept = tuple(h for h in multiples if self._shares(frequency, (h,))[0][0] >= least**2)
+        while kept:
+            values, vectors = self._shares(frequency, kept)
+            if values[0] >= least**2:
+                break
+            worst = int(np.abs(vectors[:, 0]).argmax()) // 2
+            kept = kept[:worst] + kept[worst + 1 :]
+        return kept
+
+    def _shares(self, frequency: float, multiples: Sequence[int]) -> tuple[FloatArray, FloatArray]:
+        columns = self._columns([Line("", h * frequency) for h in multiples])
         rest = self._project(columns)
-        return remaining_share(rest.T @ rest, columns) >= DISTINCT
+        return shares(rest.T @ rest, columns)
 
     def energy(self, frequency: float, multiples: Sequence[int]) -> float:
         """E(f)."""

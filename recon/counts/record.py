@@ -14,13 +14,11 @@ read while it grows and stays readable if its writer dies.
 
 from __future__ import annotations
 
-import shutil
 from collections.abc import Iterator
 from contextlib import contextmanager
 from dataclasses import dataclass
 from pathlib import Path
-from types import TracebackType
-from typing import Any, Self
+from typing import Any
 
 import h5py
 import numpy as np
@@ -29,11 +27,10 @@ from numpy.typing import NDArray
 from recon.counts.acquisition import Acquisition
 from recon.counts.truncated import open_padded, rows_present, superblock
 from recon.errors import InputError
-from recon.files import write_failure
 from recon.instrument import Instrument
 from recon.protocol import Protocol
 from recon.specimen import Specimen
-from recon.store import FORMAT, FORMAT_VERSION, read_dataset, read_text, reading
+from recon.store import read_dataset, read_text, reading
 from recon.store import KIND as KIND_ATTRIBUTE
 
 KIND = "counts"
@@ -160,6 +157,45 @@ class CountsRecord:
                 yield where, parts[0], parts[1]
 
 
+def row_shape(self) -> tuple[int, int, int]:
+        """(frames, channels y, channels x)."""
+        return row_shape(self.instrument, self.protocol, self.acquisition)
+
+    @property
+    def nbytes(self) -> int:
+        """Size of the whole rows' counts in bytes, uncompressed."""
+        return 2 * len(self) * int(np.prod(self.row_shape)) * self.dtype.itemsize
+
+    @property
+    def specimen(self) -> Specimen:
+        """Grid, species and notes, without maps."""
+        if not self.description_json:
+            raise InputError("carries no description of the specimen", str(self.path))
+        return Specimen.from_description_json(self.description_json)
+
+    def row(self, number: int) -> tuple[Counts, Counts]:
+        """Signal and reference of one row, (frames, channels y, channels x)."""
+        with _opened(self.path) as (file, _), reading(str(self.path)):
+            return file["signal"][number], file["reference"][number]
+
+    def rows(self, batch: int | None = None) -> Iterator[tuple[slice, Counts, Counts]]:
+        """Read the whole rows once, in order: (rows, signal, reference), each (n, frames, y, x).
+
+        The arrays are buffers that the next but one step fills again.
+        """
+        size = batch or max(1, BATCH_BYTES // (2 * self.nbytes // max(1, 2 * len(self))))
+        shape = (min(size, max(1, len(self))), *self.row_shape)
+        buffers = [(np.empty(shape, self.dtype), np.empty(shape, self.dtype)) for _ in range(3)]
+        with _opened(self.path) as (file, _), reading(str(self.path)):
+            signal, reference = file["signal"], file["reference"]
+            for turn, start in enumerate(range(0, len(self), size)):
+                where = slice(start, min(start + size, len(self)))
+                parts = [one[: where.stop - start] for one in buffers[turn % 3]]
+                signal.read_direct(parts[0], np.s_[where])
+                reference.read_direct(parts[1], np.s_[where])
+                yield where, parts[0], parts[1]
+
+
 class CountsWriter:
     """Appends rows to a new file, or to one that an earlier writer of the same table left.
 
@@ -202,6 +238,7 @@ class CountsWriter:
         self._contents = (instrument, protocol, acquisition, description_json)
         self._compression = compression
         self._file: h5py.File | None = None
+        self._broken = False
 
     def __enter__(self) -> Self:
         try:
@@ -247,6 +284,9 @@ class CountsWriter:
         same = before.protocol.digest() == self._contents[1].digest()
         if not same or before.row_shape != self.shape or before.dtype != self.dtype:
             raise InputError("holds another measurement", str(self.path), "choose another name")
+        head = superblock(self.path)
+        if head is not None and head[1]:
+            _recovered(self.path)
         file = h5py.File(self.path, "r+", libver="latest")
         for name in ("signal", "reference", "shot", "clock_time"):
             file[name].resize(len(before), axis=0)
@@ -276,8 +316,10 @@ class CountsWriter:
                 file[name].resize(row + 1, axis=0)
                 file[name][row] = value
             file.flush()
-        except OSError as error:
-            raise write_failure(self.path, error) from error
+        except (OSError, RuntimeError) as error:
+            self._broken = True
+            reason = error if isinstance(error, OSError) else OSError(str(error))
+            raise write_failure(self.path, reason) from error
 
     def __exit__(
         self,
@@ -286,8 +328,13 @@ class CountsWriter:
         trace: TracebackType | None,
     ) -> None:
         file, self._file = self._file, None
-        if file is not None:
+        if file is None:
+            return
+        try:
             file.close()
+        except (OSError, RuntimeError):
+            if not self._broken:
+                raise
 
 
 def row_shape(

@@ -95,14 +95,14 @@ def stream(
 ) -> tuple[RowTable, FloatArray, NDArray[np.bool_], ComplexArray]:
     """Fill the scratch; also light, saturation and mean tone phasor of every channel.
 
-    With a tone, each row is turned by the phase of its tone, which undoes jitter of its start.
+    With a tone, rows are turned by its phase: each by its own where their starts jitter, all by the
+    same where they do not.
     """
     channels = int(np.prod(counts.row_shape[1:]))
     light: FloatArray = np.zeros(channels)
     phasor: ComplexArray = np.zeros(channels, complex)
     saturated: NDArray[np.bool_] = np.zeros(channels, bool)
     rows: list[tuple[Any, ...]] = []
-    weigh = _tone_weight(look)
     used = set(use.tolist())
     for where, signals, references in prefetched(counts.rows()):
         for row in range(where.start, where.stop):
@@ -110,9 +110,9 @@ def stream(
                 continue
             signal, reference = signals[row - where.start], references[row - where.start]
             samples, lines, level, full = _row(counts, look, signal, reference, row)
-            mean = complex(lines[0] @ weigh) if tone else 1.0
-            turn = np.conj(mean) / abs(mean) if mean else 1.0
+            mean = complex(lines[0] @ look.tone_weight) if tone else 1.0
             if tone:
+                turn = look.turn(mean)
                 samples *= np.complex64(turn)
                 phasor += lines[0] * turn
             light += level
@@ -161,15 +161,6 @@ def _row(
     lines /= divisor
     full = signal.max(axis=0) >= acquisition.full_scale_count
     return samples, lines, np.asarray(level, np.float64), full
-
-
-def _tone_weight(look: Inspection) -> FloatArray:
-    """Weights of the channels' tone in a row's phase: contrast over variance, summing to 1."""
-    weight = np.where(
-        look.noise > 0, np.clip(look.contrast, 0, 1) / np.maximum(look.noise, 1e-30) ** 2, 0
-    )
-    total = weight.sum()
-    return weight / total if total > 0 else np.full(len(weight), 1 / len(weight))
 
 
 def prefetched(items: Iterable[Item], ahead: int = 1) -> Iterator[Item]:

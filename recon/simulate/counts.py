@@ -18,7 +18,8 @@ import numpy as np
 from numpy.typing import NDArray
 
 from recon.counts.acquisition import Acquisition
-from recon.counts.record import COUNT_TYPES, CountsRecord, CountsWriter
+from recon.counts.record import COUNT_TYPES, CountsRecord
+from recon.counts.writer import CountsWriter
 from recon.instrument import Instrument
 from recon.physics.photons import phase_per_field
 from recon.protocol import Protocol
