@@ -16,9 +16,11 @@ from recon.solvers.loop import Reason, Residuals, Solution, Stopping, solve
 from recon.solvers.problem import Problem, Weighted
 from recon.solvers.replicas import Replicas, Scatter
 from recon.solvers.resolution import PointResponse, Responses, resting_on_prior
-from recon.solvers.weight import SteinRisk, WeightRule
+from recon.solvers.weight import Fixed, SteinRisk, WeightRule
 
 Array = NDArray[np.inexact]
+GUESS = 1.0
+"""Weight of the rough solution that guides the choice where blocks are not exact."""
 
 
 @dataclass(frozen=True)
@@ -60,7 +62,7 @@ class Penalised:
     ) -> Estimate:
         """Choose the weight, solve, and draw replicas for the error."""
         run = _Run(self, quadratic, tuple(prior.on(frame) for prior in self.priors), progress)
-        weight = self.weight.choose(quadratic, run.searcher(), run.searcher())
+        weight = run.chosen_weight()
         solution = run.solve(weight, quadratic, self.stopping, None)
         scatter = responses = None
         if self.replicas is not None:
@@ -99,6 +101,27 @@ class _Run:
         self.settings, self.quadratic, self.terms = settings, quadratic, terms
         self.shares = settings.shares or (1.0,) * len(terms)
         self.progress = progress
+
+    def chosen_weight(self) -> float:
+        """λ by the rule; where blocks are not exact, by the nearest blocks that are."""
+        rule = self.settings.weight
+        if isinstance(rule, Fixed) or not hasattr(self.quadratic, "nearest"):
+            return rule.choose(self.quadratic, self.searcher(), self.searcher())
+        guide = self._guide()
+        run = _Run(self.settings, guide, self.terms, self.progress)
+        return rule.choose(guide, run.searcher(), run.searcher())
+
+    def _guide(self) -> BlockQuadratic:
+        """The nearest blocks, with what they lack filled in from a rough solution.
+
+        G₀ with b + (G₀ − G) x̂ has the gradient of the true data term at x̂.
+        """
+        rough = Stopping(self.settings.search_tolerance, limit=self.settings.stopping.limit)
+        x = self.solve(GUESS, self.quadratic, rough, None).x
+        nearest: BlockQuadratic = self.quadratic.nearest  # type: ignore[attr-defined]
+        return nearest.with_linear(
+            self.quadratic.linear + nearest.normal(x) - self.quadratic.normal(x)
+        )
 
     def solve(
         self,
