@@ -1,0 +1,1 @@
+"""What a record tells of the apparatus: corrections to the descriptions, with standard errors."""
