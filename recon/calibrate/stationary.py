@@ -1,0 +1,146 @@
+"""A stationary Gaussian prior for amounts that nobody knows, and its evidence.
+
+Component c of the unknown has at lateral frequency κ' the covariance between planes
+
+    Γ_c(κ') = v_c s(κ') R,   s ∝ (1 + (κ' ℓ)²/p)^(−p/2),   R_zz' = ρ^|z − z'|,
+
+s of mean 1 over the lattice, its value at κ' = 0 raised by `MEAN` so that the mean amount is left
+free. With b = AᴴWy and the blocks of G = AᴴWA the log evidence of complex Gaussian samples is
+
+    −‖W^{1/2}y‖² + bᴴ (G + Γ⁻¹)⁻¹ b − log det(1 + Γ G),
+
+up to what depends on the noise alone (no factor ½: σ² = E|n|²). The v_c are maximised in closed
+loops here, from eigenvalues that they share; ℓ, p, ρ are left to the caller.
+"""
+
+from __future__ import annotations
+
+from dataclasses import dataclass
+
+import numpy as np
+from numpy.typing import NDArray
+
+from recon.forward.statistics import Statistics
+from recon.grid import Grid
+
+ComplexArray = NDArray[np.complexfloating]
+FloatArray = NDArray[np.floating]
+
+MEAN = 1e3
+NEWTON = 30
+
+
+@dataclass(frozen=True)
+class Shape:
+    """What the spectrum looks like, apart from its size.
+
+    Attributes
+    ----------
+    length
+        ℓ, metres.
+    power
+        p: a power law κ^−p beyond √p/ℓ, a Gaussian if p is large.
+    correlation
+        ρ between neighbouring planes, between −1 and 1.
+    """
+
+    length: float
+    power: float
+    correlation: float
+
+    def lateral(self, grid: Grid) -> FloatArray:
+        """s in FFT order, (ny, nx)."""
+        _, ny, nx = grid.shape
+        wave_y = 2 * np.pi * np.fft.fftfreq(ny, grid.voxel[1])
+        wave_x = 2 * np.pi * np.fft.fftfreq(nx, grid.voxel[2])
+        square = (wave_y**2)[:, None] + wave_x**2
+        spectrum = (1 + square * self.length**2 / self.power) ** (-self.power / 2)
+        spectrum /= spectrum.mean()
+        spectrum[0, 0] *= MEAN
+        return spectrum
+
+    def axial(self, planes: int) -> FloatArray:
+        """R, (nz, nz)."""
+        levels = np.arange(planes)
+        return np.asarray(self.correlation ** np.abs(levels[:, None] - levels))
+
+    def root(self, statistics: Statistics) -> FloatArray:
+        """L with L Lᵀ = Γ/v in the blocks of G, (blocks, q, q)."""
+        grid, layout = statistics.grid, statistics.layout
+        planes = np.broadcast_to(np.sqrt(self.lateral(grid)), grid.shape)
+        scale = layout.gather(np.ascontiguousarray(planes)[None])
+        scale = scale.reshape(len(scale), -1).T
+        factor = np.linalg.cholesky(self.axial(grid.shape[0]) + 1e-9 * np.eye(grid.shape[0]))
+        whole = np.kron(np.eye(scale.shape[1] // grid.shape[0]), factor)
+        return scale[:, :, None] * whole
+
+
+@dataclass(frozen=True, eq=False)
+class Evidence:
+    """Log evidence of statistics under a shape, the variances maximised.
+
+    Attributes
+    ----------
+    value
+        The log evidence.
+    variance
+        v_c, (components,).
+    explained
+        bᴴ (G + Γ⁻¹)⁻¹ b.
+    """
+
+    value: float
+    variance: FloatArray
+    explained: float
+
+
+def evidence(statistics: Statistics, shape: Shape) -> Evidence:
+    """Log evidence of the statistics of components with a Gram matrix of 1.
+
+    Parameters
+    ----------
+    statistics
+        Of an orthonormal time basis, so that components are uncoupled.
+    """
+    root = shape.root(statistics)
+    q = root.shape[1]
+    normal = statistics.normal.reshape(q, q, -1).transpose(2, 0, 1).astype(complex)
+    values, vectors = np.linalg.eigh(root.transpose(0, 2, 1) @ normal @ root)
+    values = np.maximum(values, 0)
+    pixels = np.prod(statistics.grid.shape[1:])
+    value, explained, variance = -statistics.energy, 0.0, []
+    for one in statistics.linear:
+        b = statistics.layout.gather(one[None]).reshape(q, -1).T.astype(complex)
+        inner = np.einsum("kqp,kq->kp", root, b)
+        power = np.abs(np.einsum("kqp,kq->kp", vectors.conj(), inner)) ** 2 / pixels
+        size = _best_variance(values, power)
+        share = size / (1 + size * values)
+        explained += float((power * share).sum())
+        value -= float(np.log1p(size * values).sum())
+        variance.append(size)
+    return Evidence(value + explained, np.array(variance), explained)
+
+
+def _best_variance(values: FloatArray, power: FloatArray) -> float:
+    """v that maximises Σ power v/(1 + vλ) − log(1 + vλ): Newton in log v, kept to a bracket."""
+    values, power = values[values > 0], power[values > 0]
+    if not values.size:
+        return 0.0
+    # E power = λ(1 + vλ): a first guess from the strongest part
+    strong = values >= 0.1 * values.max()
+    guess = (power[strong] / values[strong] - 1).sum() / values[strong].sum()
+    place = np.log(max(guess, 1e-3 / values.max()))
+    for _ in range(NEWTON):
+        size = np.exp(place)
+        share = size / (1 + size * values)
+        slope = (power * share / (1 + size * values) - share * values).sum()
+        curve = (
+            power * share * (1 - size * values) / (1 + size * values) ** 2
+            - share * values / (1 + size * values)
+        ).sum()
+        change = -slope / curve if curve < 0 else np.sign(slope)
+        change = float(np.clip(change, -2, 2))
+        place += change
+        if abs(change) < 1e-10 or place < -80:
+            break
+    return float(np.exp(place))
