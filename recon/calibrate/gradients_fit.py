@@ -20,7 +20,7 @@ from numpy.typing import NDArray
 from recon.calibrate.ascent import Evaluation, GeometryFit, ascend, chosen, concluded
 from recon.calibrate.compressed import Compressed, Progress
 from recon.calibrate.estimate import Estimate
-from recon.calibrate.evidence import best_shape, block_statistics, unmixed
+from recon.calibrate.evidence import START, block_statistics, unmixed
 from recon.calibrate.geometry_fit import WaveDerivatives, stages
 from recon.calibrate.geometry_parameters import (
     NUCLEAR_MATRIX,
@@ -31,10 +31,11 @@ from recon.calibrate.geometry_parameters import (
     wave_directions,
 )
 from recon.calibrate.regularised import Regularised
-from recon.calibrate.stationary import Evidence, Shape
+from recon.calibrate.stationary import Shape
 from recon.errors import InputError
 from recon.forward.general import GeneralOperator
 from recon.forward.general_model import GeneralModel
+from recon.forward.statistics import Statistics
 from recon.protocol import Protocol
 from recon.record import Record
 
@@ -90,6 +91,20 @@ def gradients_from_record(
     return concluded(unknown, stated, values, judged, here.misfit, passes)
 
 
+def moment_variance(statistics: Statistics, shape: Shape, data: Compressed) -> FloatArray:
+    """v_c for which the samples have the energy that was measured, whatever the gradients.
+
+    Energy expected of unit variance is the trace of ΓG, noise adds 1 per sample.
+    """
+    root = shape.root(statistics)
+    q = root.shape[1]
+    normal = statistics.normal.reshape(q, q, -1)
+    traces = np.einsum("kqp,qrk,krp->k", root, normal, root, optimize=True).real
+    power = (np.abs(data.samples) ** 2).sum(axis=(2, 3), dtype=float)
+    excess = data.weight @ power - data.samples[:, 0].size
+    return np.asarray(np.maximum(excess, 1.0) / traces[1:].sum())
+
+
 @dataclass(eq=False)
 class _Separable:
     """−min over x of ‖W^{1/2}(y − A(θ)x)‖² + xᴴΓ⁻¹x with its score and information."""
@@ -97,19 +112,19 @@ class _Separable:
     data: Compressed
     unknown: tuple[Quantity, ...]
     shape: Shape
-    prior: Evidence
+    variance: FloatArray
     start: ComplexArray | None = field(default=None)
 
     @classmethod
     def of(
         cls, data: Compressed, unknown: tuple[Quantity, ...], values: dict[str, float]
     ) -> _Separable:
-        shape, prior = best_shape(block_statistics(data, values))
-        return cls(data, unknown, shape, prior)
+        statistics = block_statistics(data, values)
+        return cls(data, unknown, START, moment_variance(statistics, START, data))
 
     def __call__(self, values: dict[str, float]) -> Evaluation:
         apparatus, table = described(self.data.record.instrument, self.data.protocol, values)
-        solver = Regularised(block_statistics(self.data, values), self.shape, self.prior.variance)
+        solver = Regularised(block_statistics(self.data, values), self.shape, self.variance)
         components = self.data.samples.shape[1]
         weight = self.data.weight[:, None, None, None].astype(np.float32)
         operator = self._operator(apparatus, table, components)

@@ -70,15 +70,16 @@ class Regularised:
         strength = _dot(rest, cured)
         limit = tolerance**2 * _dot(goal, self._cure(goal))
         for _ in range(MOST_ITERATIONS):
-            if (strength <= limit).all():
+            busy = strength > limit
+            if not busy.any():
                 break
             image = self._apply(operator, direction)
-            length = strength / np.maximum(_dot(direction, image), 1e-30)
+            length = _ratio(strength, _dot(direction, image), busy)
             w = w + _each(length) * direction
             rest = rest - _each(length) * image
             cured = self._cure(rest)
             stronger = _dot(rest, cured)
-            direction = cured + _each(stronger / np.maximum(strength, 1e-30)) * direction
+            direction = cured + _each(_ratio(stronger, strength, busy)) * direction
             strength = stronger
         return self._collect(w), w
 
@@ -115,6 +116,10 @@ class Regularised:
 
 def _dot(a: ComplexArray, b: ComplexArray) -> FloatArray:
     return np.einsum("ckp,ckp->c", a.conj(), b).real
+
+
+def _ratio(upper: FloatArray, lower: FloatArray, where: NDArray[np.bool_]) -> FloatArray:
+    return np.divide(upper, lower, out=np.zeros_like(upper), where=where & (lower > 0))
 
 
 def _each(factor: FloatArray) -> FloatArray:
