@@ -55,6 +55,7 @@ def geometry_from_sample(
     stated: Sequence[Estimate] = (),
     *,
     shots: NDArray[np.integer] | None = None,
+    refinement: tuple[int, int, int] | None = None,
     progress: Progress | None = None,
 ) -> GeometryFit:
     """Estimate geometry by comparing a record with a sample that is known.
@@ -62,7 +63,7 @@ def geometry_from_sample(
     Parameters
     ----------
     sample
-        With maps; its fine grid is used.
+        With maps.
     quantities
         What to estimate, of `recon.calibrate.geometry_parameters`.
     stated
@@ -70,6 +71,9 @@ def geometry_from_sample(
     shots
         Numbers of the shots to use; by default those whose wavevectors leave room to the fine
         grid's Nyquist wavenumber.
+    refinement
+        How much finer than the sample's grid to compute, (z, y, x); by default as fine as the maps.
+        Coarser is quicker, and wrong by what the maps vary within a voxel.
     progress
         Called as progress(passes, most passes).
 
@@ -79,7 +83,7 @@ def geometry_from_sample(
         The sample has no maps or does not span the view; a quantity does not exist.
     """
     unknown, values = chosen(quantities, stated, nominal_values(record.instrument))
-    scene = _Sample.of(record, sample)
+    scene = _Sample.of(record, sample, refinement or sample.refinement)
     shots = inside(record.protocol, scene.grid) if shots is None else shots
     data = compress(record, shots, species=sample.species)
     passes = 0
@@ -112,10 +116,9 @@ class _Sample:
     origin: tuple[float, float]
 
     @classmethod
-    def of(cls, record: Record, sample: Specimen) -> _Sample:
-        if sample.maps is None:
-            raise InputError("the calibration sample has no maps", "calibration", "give its maps")
-        fine = sample.grid.refined(sample.refinement)
+    def of(cls, record: Record, sample: Specimen, refinement: tuple[int, int, int]) -> _Sample:
+        maps = _averaged(sample, refinement)
+        fine = sample.grid.refined(refinement)
         instrument = record.instrument
         top = fine.heights[-1] + instrument.depth + instrument.thickness
         margin = [
@@ -129,7 +132,7 @@ class _Sample:
         grid = widened(fine, (margin[0], margin[1]))
         amounts = np.zeros((len(sample.species), *grid.shape), np.complex64)
         _, ny, nx = fine.shape
-        amounts[..., margin[0] : margin[0] + ny, margin[1] : margin[1] + nx] = sample.maps
+        amounts[..., margin[0] : margin[0] + ny, margin[1] : margin[1] + nx] = maps
         origin = [(d - f) / 2 for d, f in zip(sample.grid.voxel[1:], fine.voxel[1:], strict=True)]
         return cls(grid, amounts, (margin[0], margin[1]), (origin[0], origin[1]))
 
@@ -149,6 +152,23 @@ class _Sample:
             courses=data.mixing,
         )
         return GeneralOperator(model).apply(self.amounts)
+
+
+def _averaged(sample: Specimen, refinement: tuple[int, int, int]) -> FloatArray:
+    """Maps averaged down to a refinement that divides their own."""
+    if sample.maps is None:
+        raise InputError("the calibration sample has no maps", "calibration", "give its maps")
+    pairs = list(zip(sample.refinement, refinement, strict=True))
+    if any(want < 1 or have % want for have, want in pairs):
+        raise InputError(
+            f"refinement {refinement} does not divide that of the maps, {sample.refinement}",
+            "calibration",
+            "use its divisors",
+        )
+    parts = [have // want for have, want in pairs]
+    counts = [n * want for n, want in zip(sample.grid.shape, refinement, strict=True)]
+    split = [length for pair in zip(counts, parts, strict=True) for length in pair]
+    return np.asarray(sample.maps.reshape(-1, *split).mean(axis=(2, 4, 6)))
 
 
 def _whole_pixels(length: float, edge: float, pixel: float) -> int:

@@ -16,12 +16,13 @@ from difflib import get_close_matches
 
 import numpy as np
 from numpy.typing import NDArray
+from scipy.spatial.transform import Rotation
 
 from recon.calibrate.estimate import Estimate
 from recon.errors import InputError
 from recon.forward.off_lattice import calibrated
 from recon.instrument import ELECTRON_HZ_PER_T, PROTON_HZ_PER_T, Instrument
-from recon.physics.dipole import precession_frame
+from recon.physics.dipole import magnetisation_direction, precession_frame
 from recon.protocol import Protocol
 
 FloatArray = NDArray[np.floating]
@@ -148,11 +149,15 @@ def _instrument(instrument: Instrument, values: Values) -> Instrument:
     layer = {name: values[name] for name in ("depth_um", "thickness_um") if name in values}
     if layer:
         changes["sensor_layer"] = instrument.sensor_layer.model_copy(update=layer)
-    tilts = np.radians([values.get(f"bias_tilt_{n}_deg", 0.0) for n in (1, 2)])
+    tilts = _tilts(values)
     if tilts.any():
         field = tilted(instrument.bias_field, tilts) * 1e3
         changes["bias_field_mT"] = tuple(float(part) for part in field)
     return instrument.model_copy(update=changes) if changes else instrument
+
+
+def _tilts(values: Values) -> FloatArray:
+    return np.radians([values.get(f"bias_tilt_{n}_deg", 0.0) for n in (1, 2)])
 
 
 def tilted(field: FloatArray, tilts: FloatArray) -> FloatArray:
@@ -189,11 +194,28 @@ def _protocol(instrument: Instrument, protocol: Protocol, values: Values) -> Pro
     }
     if matrices:
         protocol = calibrated(protocol, **matrices)
-    scale = values.get("signal_scale", 1.0)
-    phase = np.radians(values.get("signal_phase_deg", 0.0))
-    if (scale, phase) != (1.0, 0.0):
-        protocol = replace(protocol, amplitude=protocol.amplitude * scale * np.exp(1j * phase))
-    return protocol
+    factor = values.get("signal_scale", 1.0) * np.exp(
+        1j * np.radians(values.get("signal_phase_deg", 0.0))
+    )
+    factor *= _frame_phase(instrument.bias_field, _tilts(values))
+    return protocol if factor == 1 else replace(protocol, amplitude=protocol.amplitude * factor)
+
+
+def _frame_phase(field: FloatArray, tilts: FloatArray) -> complex:
+    """Factor that keeps the magnetisation's phase while the bias field turns under it.
+
+    The phase of e1 − i e2 is a convention that jumps where the field passes through z. Turned
+    along with the field by the smallest rotation, the magnetisation keeps its own.
+    """
+    if not tilts.any():
+        return 1.0
+    length = np.linalg.norm(field)
+    turned = tilted(field, tilts) / length
+    axis = np.cross(field / length, turned)
+    rotation = Rotation.from_rotvec(axis / np.linalg.norm(axis) * np.linalg.norm(tilts))
+    kept = rotation.as_matrix() @ magnetisation_direction(field)
+    factor = np.vdot(magnetisation_direction(turned), kept) / 2
+    return complex(factor / abs(factor))
 
 
 def gradient_matrix(values: Values, whose: str) -> FloatArray:
