@@ -31,7 +31,7 @@ from recon.calibrate.geometry_parameters import (
     nominal_values,
 )
 from recon.calibrate.identifiable import told
-from recon.calibrate.stationary import Evidence, Shape, evidence
+from recon.calibrate.stationary import Shape, evidence
 from recon.errors import InputError
 from recon.forward import ForwardModel, Statistics, accumulate
 from recon.record import Record
@@ -40,8 +40,9 @@ FloatArray = NDArray[np.floating]
 
 BLOCKS_STAY = frozenset(one.name for one in LAYER + BIAS)
 START = Shape(10e-6, 3.0, 0.5)
-WIDE = np.array([2.0, 1.0, 1.5])
-"""Standard deviations of log ℓ, log p and artanh ρ that are thought possible."""
+WIDE = 1.5
+"""Standard deviation of artanh ρ that is thought possible."""
+MOST_CORRELATED = 4.0
 ROUNDING = 1e-7
 """Error of the evidence, in parts of the record's energy, from statistics in single precision."""
 HELD = 24
@@ -124,33 +125,26 @@ def block_statistics(data: Compressed, values: dict[str, float]) -> Statistics:
     return accumulate(model, [(slice(0, len(data)), data.samples)])
 
 
-def best_shape(statistics: Statistics, start: Shape = START) -> tuple[Shape, Evidence]:
-    """The shape of largest evidence at a fixed geometry (Nelder and Mead's simplex)."""
+def best_shape(statistics: Statistics) -> Shape:
+    """The correlation between planes that has the largest evidence at a fixed geometry."""
 
-    def cost(point: FloatArray) -> float:
-        return -evidence(statistics, _shape(point)).value - _favour(point)
+    def cost(place: float) -> float:
+        return -evidence(statistics, _shape(place)).value - _favour(place)
 
-    found = scipy.optimize.minimize(
-        cost, _point(start), method="Nelder-Mead", options={"xatol": 0.02, "fatol": 0.1}
+    found = scipy.optimize.minimize_scalar(
+        cost, bounds=(0.0, MOST_CORRELATED), method="bounded", options={"xatol": 0.02}
     )
-    shape = _shape(found.x)
-    return shape, evidence(statistics, shape)
+    return _shape(float(found.x))
 
 
-def _point(shape: Shape) -> FloatArray:
-    return np.array(
-        [np.log(shape.length * 1e6), np.log(shape.power), np.arctanh(shape.correlation)]
-    )
+def _shape(place: float) -> Shape:
+    bound = MOST_CORRELATED + 1
+    return replace(START, correlation=float(np.tanh(np.clip(place, -bound, bound))))
 
 
-def _favour(point: FloatArray) -> float:
-    """Log density of a wide Gaussian about `START`: it decides what the record leaves open."""
-    return -0.5 * float((((point - _point(START)) / WIDE) ** 2).sum())
-
-
-def _shape(point: FloatArray) -> Shape:
-    length, power = np.exp(np.clip(point[:2], (-3.0, -3.0), (6.0, 5.0)))
-    return Shape(length * 1e-6, power, float(np.tanh(np.clip(point[2], -4, 4))))
+def _favour(place: float) -> float:
+    """Log density of a wide Gaussian over artanh ρ: it decides what the record leaves open."""
+    return -0.5 * ((place - np.arctanh(START.correlation)) / WIDE) ** 2
 
 
 @dataclass(eq=False)
@@ -164,10 +158,10 @@ class _Search:
     _held: dict[tuple[float, ...], Statistics] = field(default_factory=dict)
 
     def run(self, stated: Sequence[Estimate], progress: Progress | None) -> GeometryFit:
-        shape, _ = best_shape(block_statistics(self.data, self.values))
-        point = np.concatenate([self._units_of(self.values), _point(shape)])
-        steps = np.array([one.step / one.reach for one in self.unknown] + [0.05, 0.05, 0.05])
-        least = [one.least / one.reach for one in self.unknown] + [-np.inf] * 3
+        place = np.arctanh(best_shape(block_statistics(self.data, self.values)).correlation)
+        point = np.array([*self._units_of(self.values), place])
+        steps = np.array([one.step / one.reach for one in self.unknown] + [0.05])
+        least = [one.least / one.reach for one in self.unknown] + [-np.inf]
         point, hessian = climb(
             self._value, point, steps, np.array(least), ROUNDING * self.data.energy, progress
         )
@@ -178,7 +172,7 @@ class _Search:
         reach = np.array([one.reach for one in self.unknown])
         judged = told(information / np.outer(reach, reach), self.unknown)
         values = self._values_of(point)
-        best = evidence(block_statistics(self.data, values), _shape(point[count:]))
+        best = evidence(block_statistics(self.data, values), _shape(float(point[-1])))
         samples = self.data.samples.size + self.data.rest_count
         misfit = (self.data.energy - best.explained + self.data.rest) / samples
         return concluded(self.unknown, stated, values, judged, misfit, self.passes)
@@ -200,5 +194,5 @@ class _Search:
                 self._held.pop(next(iter(self._held)))
             self._held[key] = block_statistics(self.data, self._values_of(point))
             self.passes += 1
-        shape = point[count:]
-        return evidence(self._held[key], _shape(shape)).value + _favour(shape)
+        place = float(point[-1])
+        return evidence(self._held[key], _shape(place)).value + _favour(place)

@@ -5,12 +5,13 @@ Component c of the unknown has at lateral frequency κ' the covariance between p
     Γ_c(κ') = v_c s(κ') R,   s ∝ (1 + (κ' ℓ)²/p)^(−p/2),   R_zz' = ρ^|z − z'|,
 
 s of mean 1 over the lattice, its value at κ' = 0 raised by `MEAN` so that the mean amount is left
-free. With b = AᴴWy and the blocks of G = AᴴWA the log evidence of complex Gaussian samples is
+free. For the evidence v_c is a number of its own in every ring of |κ'|, half an octave wide, so
+that no spectrum is forced upon the sample; s then only says how it runs within a ring. With b = AᴴWy and the blocks of G = AᴴWA the log evidence of complex Gaussian samples is
 
     −‖W^{1/2}y‖² + bᴴ (G + Γ⁻¹)⁻¹ b − log det(1 + Γ G),
 
-up to what depends on the noise alone (no factor ½: σ² = E|n|²). The v_c are maximised in closed
-loops here, from eigenvalues that they share; ℓ, p, ρ are left to the caller.
+up to what depends on the noise alone (no factor ½: σ² = E|n|²). The v are maximised here, one
+at a time from eigenvalues that they share; ρ is left to the caller.
 """
 
 from __future__ import annotations
@@ -27,6 +28,8 @@ ComplexArray = NDArray[np.complexfloating]
 FloatArray = NDArray[np.floating]
 
 MEAN = 1e3
+RINGS = 2
+"""Rings of |κ'| per octave."""
 NEWTON = 30
 
 
@@ -84,7 +87,7 @@ class Evidence:
     value
         The log evidence.
     variance
-        v_c, (components,).
+        v_cr, (components, rings).
     explained
         bᴴ (G + Γ⁻¹)⁻¹ b.
     """
@@ -92,6 +95,23 @@ class Evidence:
     value: float
     variance: FloatArray
     explained: float
+
+
+def rings(statistics: Statistics) -> NDArray[np.intp]:
+    """Ring of every block, (blocks,): 0 for κ' = 0, then `RINGS` to an octave of |κ'|.
+
+    Where frequencies alias onto each other the lowest one counts.
+    """
+    grid, layout = statistics.grid, statistics.layout
+    _, ny, nx = grid.shape
+    wave_y, wave_x = (
+        2 * np.pi * np.fft.fftfreq(n, edge) for n, edge in zip((ny, nx), grid.voxel[1:], strict=True)
+    )
+    size = np.hypot(wave_y[:, None], wave_x) / min(grid.lattice_step)
+    whole = np.broadcast_to(size, (1, *grid.shape))
+    lowest = layout.gather(np.ascontiguousarray(whole)).reshape(layout.block_size, -1).min(axis=0)
+    octaves = np.log2(np.maximum(lowest, 0.5)) * RINGS
+    return np.where(lowest < 0.5, 0, 1 + np.floor(octaves + 1e-9).astype(int))
 
 
 def evidence(statistics: Statistics, shape: Shape) -> Evidence:
@@ -108,17 +128,19 @@ def evidence(statistics: Statistics, shape: Shape) -> Evidence:
     values, vectors = np.linalg.eigh(root.transpose(0, 2, 1) @ normal @ root)
     values = np.maximum(values, 0)
     pixels = np.prod(statistics.grid.shape[1:])
+    members = [np.flatnonzero(rings(statistics) == r) for r in np.unique(rings(statistics))]
     value, explained, variance = -statistics.energy, 0.0, []
     for one in statistics.linear:
         b = statistics.layout.gather(one[None]).reshape(q, -1).T.astype(complex)
         inner = np.einsum("kqp,kq->kp", root, b)
         power = np.abs(np.einsum("kqp,kq->kp", vectors.conj(), inner)) ** 2 / pixels
-        size = _best_variance(values, power)
-        share = size / (1 + size * values)
-        explained += float((power * share).sum())
-        value -= float(np.log1p(size * values).sum())
-        variance.append(size)
-    return Evidence(value + explained, np.array(variance), explained)
+        for ring in members:
+            size = _best_variance(values[ring], power[ring])
+            explained += float((power[ring] * size / (1 + size * values[ring])).sum())
+            value -= float(np.log1p(size * values[ring]).sum())
+            variance.append(size)
+    sizes = np.reshape(variance, (len(statistics.linear), -1))
+    return Evidence(value + explained, sizes, explained)
 
 
 def _best_variance(values: FloatArray, power: FloatArray) -> float:
