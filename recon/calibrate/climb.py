@@ -18,7 +18,7 @@ GAIN = 0.01
 MOST_STEPS = 15
 SPREAD = 0.3
 """Half step of differences in standard deviations of the coordinate."""
-WIDEST = 10.0
+WIDEST = 15.0
 """How much a half step may grow beyond the one that was given."""
 
 
@@ -46,7 +46,7 @@ def climb(
     The place (n,) and minus the Hessian (n, n).
     """
     first, widths = steps, steps
-    spread = max(SPREAD, np.sqrt(10 * noise))
+    spread = max(SPREAD, np.sqrt(100 * noise))
     for count in range(MOST_STEPS):
         value, slope, hessian = differences(function, point, widths, least)
         values, vectors = np.linalg.eigh(hessian)

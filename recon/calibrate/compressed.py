@@ -24,7 +24,7 @@ FloatArray = NDArray[np.floating]
 Progress = Callable[[int, int], None]
 
 EDGE = 0.9
-"""Share of the grid's Nyquist wavenumber that nominal wavevectors may use: true ones may be more."""
+"""Share of the grid's Nyquist wavenumber for nominal wavevectors: true ones may be longer."""
 
 
 @dataclass(frozen=True, eq=False)

@@ -7,16 +7,15 @@ the species do over time, as independent: a phase common to all shots then drops
 
 Depth and height above the face act alike: what tells them apart is that nothing lies below the
 face and that planes resemble each other. So the standard error, the inverse Hessian of the
-evidence with the hyperparameters in it, is that of a sample which the prior describes.
+evidence with the prior's numbers at their best, is that of a sample which the prior describes.
 """
 
 from __future__ import annotations
 
 from collections.abc import Sequence
-from dataclasses import dataclass, field, replace
+from dataclasses import dataclass, replace
 
 import numpy as np
-import scipy.optimize
 from numpy.typing import NDArray
 
 from recon.calibrate.ascent import GeometryFit, chosen, concluded
@@ -31,7 +30,7 @@ from recon.calibrate.geometry_parameters import (
     nominal_values,
 )
 from recon.calibrate.identifiable import told
-from recon.calibrate.stationary import Shape, evidence
+from recon.calibrate.stationary import evidence
 from recon.errors import InputError
 from recon.forward import ForwardModel, Statistics, accumulate
 from recon.record import Record
@@ -39,14 +38,8 @@ from recon.record import Record
 FloatArray = NDArray[np.floating]
 
 BLOCKS_STAY = frozenset(one.name for one in LAYER + BIAS)
-START = Shape(10e-6, 3.0, 0.5)
-WIDE = 1.5
-"""Standard deviation of artanh ρ that is thought possible."""
-MOST_CORRELATED = 4.0
 ROUNDING = 1e-7
 """Error of the evidence, in parts of the record's energy, from statistics in single precision."""
-HELD = 24
-"""Statistics of geometries that are kept for the next difference."""
 
 
 def standoff_from_record(
@@ -125,74 +118,35 @@ def block_statistics(data: Compressed, values: dict[str, float]) -> Statistics:
     return accumulate(model, [(slice(0, len(data)), data.samples)])
 
 
-def best_shape(statistics: Statistics) -> Shape:
-    """The correlation between planes that has the largest evidence at a fixed geometry."""
-
-    def cost(place: float) -> float:
-        return -evidence(statistics, _shape(place)).value - _favour(place)
-
-    found = scipy.optimize.minimize_scalar(
-        cost, bounds=(0.0, MOST_CORRELATED), method="bounded", options={"xatol": 0.02}
-    )
-    return _shape(float(found.x))
-
-
-def _shape(place: float) -> Shape:
-    bound = MOST_CORRELATED + 1
-    return replace(START, correlation=float(np.tanh(np.clip(place, -bound, bound))))
-
-
-def _favour(place: float) -> float:
-    """Log density of a wide Gaussian over artanh ρ: it decides what the record leaves open."""
-    return -0.5 * ((place - np.arctanh(START.correlation)) / WIDE) ** 2
-
-
 @dataclass(eq=False)
 class _Search:
-    """Newton's method on the evidence over geometry and the shape of the prior together."""
+    """Newton's method on the evidence."""
 
     data: Compressed
     unknown: tuple[Quantity, ...]
     values: dict[str, float]
     passes: int = 0
-    _held: dict[tuple[float, ...], Statistics] = field(default_factory=dict)
 
     def run(self, stated: Sequence[Estimate], progress: Progress | None) -> GeometryFit:
-        place = np.arctanh(best_shape(block_statistics(self.data, self.values)).correlation)
-        point = np.array([*self._units_of(self.values), place])
-        steps = np.array([one.step / one.reach for one in self.unknown] + [0.05])
-        least = [one.least / one.reach for one in self.unknown] + [-np.inf]
-        point, hessian = climb(
-            self._value, point, steps, np.array(least), ROUNDING * self.data.energy, progress
-        )
-        count = len(self.unknown)
-        # information on the geometry once the shape is no longer known
-        cross, own = hessian[:count, count:], hessian[count:, count:]
-        information = hessian[:count, :count] - cross @ np.linalg.solve(own, cross.T)
         reach = np.array([one.reach for one in self.unknown])
-        judged = told(information / np.outer(reach, reach), self.unknown)
+        begin = np.array([self.values[one.name] for one in self.unknown]) / reach
+        steps = np.array([one.step for one in self.unknown]) / reach
+        least = np.array([one.least for one in self.unknown]) / reach
+        noise = ROUNDING * self.data.energy
+        point, hessian = climb(self._value, begin, steps, least, noise, progress)
+        judged = told(hessian / np.outer(reach, reach), self.unknown)
         values = self._values_of(point)
-        best = evidence(block_statistics(self.data, values), _shape(float(point[-1])))
+        best = evidence(block_statistics(self.data, values))
         samples = self.data.samples.size + self.data.rest_count
         misfit = (self.data.energy - best.explained + self.data.rest) / samples
         return concluded(self.unknown, stated, values, judged, misfit, self.passes)
 
-    def _units_of(self, values: dict[str, float]) -> FloatArray:
-        return np.array([values[one.name] / one.reach for one in self.unknown])
-
     def _values_of(self, point: FloatArray) -> dict[str, float]:
         values = dict(self.values)
-        for one, place in zip(self.unknown, point, strict=False):
+        for one, place in zip(self.unknown, point, strict=True):
             values[one.name] = max(float(place * one.reach), one.least)
         return values
 
     def _value(self, point: FloatArray) -> float:
-        count = len(self.unknown)
-        key = tuple(point[:count])
-        if key not in self._held:
-            if len(self._held) >= HELD:
-                self._held.pop(next(iter(self._held)))
-            self._held[key] = block_statistics(self.data, self._values_of(point))
-            self.passes += 1
-        place = float(point[-1])
-        return evidence(self._held[key], _shape(place)).value + _favour(place)
+        self.passes += 1
+        return evidence(block_statistics(self.data, self._values_of(point))).value

@@ -10,7 +10,7 @@ import numpy as np
 import scipy.fft
 from numpy.typing import NDArray
 
-from recon.calibrate.stationary import Shape
+from recon.calibrate.stationary import Shape, spectrum
 from recon.forward.general import GeneralOperator
 from recon.forward.statistics import Statistics
 
@@ -33,12 +33,9 @@ class Regularised:
 
     def __init__(self, statistics: Statistics, shape: Shape, variance: FloatArray) -> None:
         self._layout, self._shape = statistics.layout, statistics.grid.shape
-        root = shape.root(statistics)
-        q = root.shape[1]
-        normal = statistics.normal.reshape(q, q, -1).transpose(2, 0, 1).astype(complex)
-        values, vectors = np.linalg.eigh(root.transpose(0, 2, 1) @ normal @ root)
+        values, vectors, root = spectrum(statistics, shape)
         self._root = root.astype(np.float32)
-        self._values = np.maximum(values, 0).astype(np.float32)
+        self._values = values.astype(np.float32)
         self._vectors = vectors.astype(np.complex64)
         self._size = np.sqrt(variance).astype(np.float32)
 
@@ -82,10 +79,6 @@ class Regularised:
             direction = cured + _each(_ratio(stronger, strength, busy)) * direction
             strength = stronger
         return self._collect(w), w
-
-    def log_determinant(self) -> float:
-        """log det(1 + ΓG) of the nearest lattice model."""
-        return float(sum(np.log1p(v * self._values.astype(float)).sum() for v in self._size**2))
 
     def _sizes(self, count: int) -> FloatArray:
         return np.tile(self._size, count // len(self._size))[:, None, None]

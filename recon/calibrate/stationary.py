@@ -5,18 +5,21 @@ Component c of the unknown has at lateral frequency κ' the covariance between p
     Γ_c(κ') = v_c s(κ') R,   s ∝ (1 + (κ' ℓ)²/p)^(−p/2),   R_zz' = ρ^|z − z'|,
 
 s of mean 1 over the lattice, its value at κ' = 0 raised by `MEAN` so that the mean amount is left
-free. For the evidence v_c is a number of its own in every ring of |κ'|, half an octave wide, so
-that no spectrum is forced upon the sample; s then only says how it runs within a ring. With b = AᴴWy and the blocks of G = AᴴWA the log evidence of complex Gaussian samples is
+free. For the evidence v and ρ are numbers of their own for each component in every ring of |κ'|,
+half an octave wide, so that no spectrum is forced upon the sample: v is maximised, and the evidence
+is averaged over a few ρ; s then only says how the spectrum runs within a ring. With b = AᴴWy and
+the blocks of G = AᴴWA the log evidence of complex Gaussian samples is
 
     −‖W^{1/2}y‖² + bᴴ (G + Γ⁻¹)⁻¹ b − log det(1 + Γ G),
 
-up to what depends on the noise alone (no factor ½: σ² = E|n|²). The v are maximised here, one
-at a time from eigenvalues that they share; ρ is left to the caller.
+up to what depends on the noise alone (no factor ½: σ² = E|n|²). The v are found one at a time,
+from eigenvalues that they share.
 """
 
 from __future__ import annotations
 
-from dataclasses import dataclass
+from collections.abc import Sequence
+from dataclasses import dataclass, replace
 
 import numpy as np
 from numpy.typing import NDArray
@@ -27,6 +30,7 @@ from recon.grid import Grid
 ComplexArray = NDArray[np.complexfloating]
 FloatArray = NDArray[np.floating]
 
+CORRELATIONS = (0.0, 0.5, 0.8, 0.95, 0.99, 0.999)
 MEAN = 1e3
 RINGS = 2
 """Rings of |κ'| per octave."""
@@ -78,22 +82,22 @@ class Shape:
         return scale[:, :, None] * whole
 
 
+START = Shape(10e-6, 3.0, 0.5)
+
+
 @dataclass(frozen=True, eq=False)
 class Evidence:
-    """Log evidence of statistics under a shape, the variances maximised.
+    """Log evidence of statistics, the variances maximised and the correlations averaged over.
 
     Attributes
     ----------
     value
         The log evidence.
-    variance
-        v_cr, (components, rings).
     explained
         bᴴ (G + Γ⁻¹)⁻¹ b.
     """
 
     value: float
-    variance: FloatArray
     explained: float
 
 
@@ -105,7 +109,8 @@ def rings(statistics: Statistics) -> NDArray[np.intp]:
     grid, layout = statistics.grid, statistics.layout
     _, ny, nx = grid.shape
     wave_y, wave_x = (
-        2 * np.pi * np.fft.fftfreq(n, edge) for n, edge in zip((ny, nx), grid.voxel[1:], strict=True)
+        2 * np.pi * np.fft.fftfreq(n, edge)
+        for n, edge in zip((ny, nx), grid.voxel[1:], strict=True)
     )
     size = np.hypot(wave_y[:, None], wave_x) / min(grid.lattice_step)
     whole = np.broadcast_to(size, (1, *grid.shape))
@@ -114,7 +119,7 @@ def rings(statistics: Statistics) -> NDArray[np.intp]:
     return np.where(lowest < 0.5, 0, 1 + np.floor(octaves + 1e-9).astype(int))
 
 
-def evidence(statistics: Statistics, shape: Shape) -> Evidence:
+def evidence(statistics: Statistics) -> Evidence:
     """Log evidence of the statistics of components with a Gram matrix of 1.
 
     Parameters
@@ -122,25 +127,45 @@ def evidence(statistics: Statistics, shape: Shape) -> Evidence:
     statistics
         Of an orthonormal time basis, so that components are uncoupled.
     """
+    ring = rings(statistics)
+    members = [np.flatnonzero(ring == one) for one in np.unique(ring)]
+    gains, explained = np.array(
+        [_of_correlation(statistics, replace(START, correlation=r), members) for r in CORRELATIONS]
+    ).transpose(1, 0, 2)
+    most = gains.max(axis=0)
+    shares = np.exp(gains - most)
+    value = (most + np.log(shares.mean(axis=0))).sum()
+    part = (explained * shares).sum(axis=0) / shares.sum(axis=0)
+    return Evidence(float(value) - statistics.energy, float(part.sum()))
+
+
+def _of_correlation(
+    statistics: Statistics, shape: Shape, members: Sequence[NDArray[np.intp]]
+) -> tuple[FloatArray, FloatArray]:
+    """Gain in log evidence over no signal, and what is explained, (components · rings,) each."""
+    values, vectors, root = spectrum(statistics, shape)
+    q = values.shape[1]
+    pixels = np.prod(statistics.grid.shape[1:])
+    gains, explained = [], []
+    for one in statistics.linear:
+        b = statistics.layout.gather(one[None]).reshape(q, -1).T.astype(complex)
+        inner = root.transpose(0, 2, 1) @ b[:, :, None]
+        power = np.abs(vectors.conj().transpose(0, 2, 1) @ inner)[:, :, 0] ** 2 / pixels
+        for ring in members:
+            size = _best_variance(values[ring], power[ring])
+            part = float((power[ring] * size / (1 + size * values[ring])).sum())
+            gains.append(part - float(np.log1p(size * values[ring]).sum()))
+            explained.append(part)
+    return np.array(gains), np.array(explained)
+
+
+def spectrum(statistics: Statistics, shape: Shape) -> tuple[FloatArray, ComplexArray, FloatArray]:
+    """Eigenvalues and eigenvectors of Lᴴ G L per block, and L, for unit variance."""
     root = shape.root(statistics)
     q = root.shape[1]
     normal = statistics.normal.reshape(q, q, -1).transpose(2, 0, 1).astype(complex)
     values, vectors = np.linalg.eigh(root.transpose(0, 2, 1) @ normal @ root)
-    values = np.maximum(values, 0)
-    pixels = np.prod(statistics.grid.shape[1:])
-    members = [np.flatnonzero(rings(statistics) == r) for r in np.unique(rings(statistics))]
-    value, explained, variance = -statistics.energy, 0.0, []
-    for one in statistics.linear:
-        b = statistics.layout.gather(one[None]).reshape(q, -1).T.astype(complex)
-        inner = np.einsum("kqp,kq->kp", root, b)
-        power = np.abs(np.einsum("kqp,kq->kp", vectors.conj(), inner)) ** 2 / pixels
-        for ring in members:
-            size = _best_variance(values[ring], power[ring])
-            explained += float((power[ring] * size / (1 + size * values[ring])).sum())
-            value -= float(np.log1p(size * values[ring]).sum())
-            variance.append(size)
-    sizes = np.reshape(variance, (len(statistics.linear), -1))
-    return Evidence(value + explained, sizes, explained)
+    return np.maximum(values, 0), vectors, root
 
 
 def _best_variance(values: FloatArray, power: FloatArray) -> float:
