@@ -16,8 +16,8 @@ from recon.simulate import NoNoise, SimulationOptions, simulate
 from recon.specimen import Species, Specimen
 from tests.cases import instrument
 
-GRID = Grid((2, 24, 24), (4e-6, 4e-6, 4e-6))
-FINE = (2, 2, 2)
+GRID = Grid((2, 16, 16), (4e-6, 4e-6, 4e-6))
+FINE = (1, 2, 2)
 TIMES = np.arange(4) * 5e-3
 
 

@@ -105,10 +105,12 @@ def _propagated(fit: GeometryFit, derive: Callable[[dict[str, float]], Told]) ->
     found = []
     values = {one.name: one.value for one in fit.estimates}
     for (name, (unit, value)), slope in zip(derive(values).items(), slopes, strict=True):
+        if not slope.any():  # nothing in it was calibrated
+            continue
         error = float(np.sqrt(slope @ fit.covariance @ slope))
         if (np.abs(slope[unknown]) > 1e-3).any():
             error = np.inf
-        found.append(Estimate(name, unit, float(value), error, fixed=not slope.any()))
+        found.append(Estimate(name, unit, float(value), error))
     return found
 
 
@@ -120,7 +122,9 @@ def _slopes(fit: GeometryFit, derive: Callable[[dict[str, float]], Told]) -> Flo
         if one.fixed:
             continue
         sides = [
-            np.array([value for _, value in derive({**values, one.name: one.value + step}).values()])
+            np.array(
+                [value for _, value in derive({**values, one.name: one.value + step}).values()]
+            )
             for step in (STEP, -STEP)
         ]
         columns.append((sides[0] - sides[1]) / (2 * STEP))

@@ -18,7 +18,7 @@ from eigenvalues that they share.
 
 from __future__ import annotations
 
-from collections.abc import Sequence
+from collections.abc import Callable
 from dataclasses import dataclass, replace
 
 import numpy as np
@@ -29,12 +29,17 @@ from recon.grid import Grid
 
 ComplexArray = NDArray[np.complexfloating]
 FloatArray = NDArray[np.floating]
+IntArray = NDArray[np.integer]
 
 CORRELATIONS = (0.0, 0.5, 0.8, 0.95, 0.99, 0.999)
 MEAN = 1e3
 RINGS = 2
 """Rings of |κ'| per octave."""
-NEWTON = 30
+NEWTON = 60
+SETTLED = 1e-6
+EMPTY = 1e-6
+"""v λ below which a ring counts as empty."""
+TINY = 1e-300
 
 
 @dataclass(frozen=True)
@@ -128,10 +133,14 @@ def evidence(statistics: Statistics) -> Evidence:
         Of an orthonormal time basis, so that components are uncoupled.
     """
     ring = rings(statistics)
-    members = [np.flatnonzero(ring == one) for one in np.unique(ring)]
+    order = np.argsort(ring, kind="stable")
+    first = np.flatnonzero(np.diff(ring[order], prepend=-1))
     gains, explained = np.array(
-        [_of_correlation(statistics, replace(START, correlation=r), members) for r in CORRELATIONS]
-    ).transpose(1, 0, 2)
+        [
+            _of_correlation(statistics, replace(START, correlation=one), order, first)
+            for one in CORRELATIONS
+        ]
+    ).transpose(1, 0, 2, 3)
     most = gains.max(axis=0)
     shares = np.exp(gains - most)
     value = (most + np.log(shares.mean(axis=0))).sum()
@@ -140,23 +149,28 @@ def evidence(statistics: Statistics) -> Evidence:
 
 
 def _of_correlation(
-    statistics: Statistics, shape: Shape, members: Sequence[NDArray[np.intp]]
+    statistics: Statistics, shape: Shape, order: IntArray, first: IntArray
 ) -> tuple[FloatArray, FloatArray]:
-    """Gain in log evidence over no signal, and what is explained, (components · rings,) each."""
+    """Gain in log evidence over no signal, and what is explained, (components, rings) each.
+
+    Blocks taken in `order` are sorted by ring; `first` is where each ring begins.
+    """
     values, vectors, root = spectrum(statistics, shape)
-    q = values.shape[1]
-    pixels = np.prod(statistics.grid.shape[1:])
-    gains, explained = [], []
-    for one in statistics.linear:
-        b = statistics.layout.gather(one[None]).reshape(q, -1).T.astype(complex)
-        inner = root.transpose(0, 2, 1) @ b[:, :, None]
-        power = np.abs(vectors.conj().transpose(0, 2, 1) @ inner)[:, :, 0] ** 2 / pixels
-        for ring in members:
-            size = _best_variance(values[ring], power[ring])
-            part = float((power[ring] * size / (1 + size * values[ring])).sum())
-            gains.append(part - float(np.log1p(size * values[ring]).sum()))
-            explained.append(part)
-    return np.array(gains), np.array(explained)
+    blocks, q = values.shape
+    count = len(statistics.linear)
+    b = statistics.layout.gather(statistics.linear).reshape(count, q, blocks).transpose(2, 1, 0)
+    inner = vectors.conj().transpose(0, 2, 1) @ (root.transpose(0, 2, 1) @ b.astype(complex))
+    power = np.abs(inner.transpose(2, 0, 1)[:, order]) ** 2 / np.prod(statistics.grid.shape[1:])
+    values = values[order]
+
+    def total(terms: FloatArray) -> FloatArray:
+        return np.add.reduceat(terms.sum(axis=2), first, axis=1)
+
+    members = np.diff(first, append=blocks)
+    size = _best_variance(values, power, total, members)
+    spread = np.repeat(size, members, axis=1)[:, :, None]
+    part = total(power * spread / (1 + spread * values))
+    return part - total(np.log1p(spread * values)), part
 
 
 def spectrum(statistics: Statistics, shape: Shape) -> tuple[FloatArray, ComplexArray, FloatArray]:
@@ -168,26 +182,39 @@ def spectrum(statistics: Statistics, shape: Shape) -> tuple[FloatArray, ComplexA
     return np.maximum(values, 0), vectors, root
 
 
-def _best_variance(values: FloatArray, power: FloatArray) -> float:
-    """v that maximises Σ power v/(1 + vλ) − log(1 + vλ): Newton in log v, kept to a bracket."""
-    values, power = values[values > 0], power[values > 0]
-    if not values.size:
-        return 0.0
-    # E power = λ(1 + vλ): a first guess from the strongest part
-    strong = values >= 0.1 * values.max()
-    guess = (power[strong] / values[strong] - 1).sum() / values[strong].sum()
-    place = np.log(max(guess, 1e-3 / values.max()))
+def _best_variance(
+    values: FloatArray,
+    power: FloatArray,
+    total: Callable[[FloatArray], FloatArray],
+    members: IntArray,
+) -> FloatArray:
+    """v that maximises Σ power v/(1 + vλ) − log(1 + vλ) in each ring, (components, rings).
+
+    Newton's method in log v. E power = λ(1 + vλ) gives the first guess.
+
+    Parameters
+    ----------
+    values, power
+        λ (blocks, q) and (components, blocks, q).
+    total
+        Sum over every ring, (components, blocks, q) to (components, rings).
+    members
+        Blocks of each ring, (rings,).
+    """
+    square = np.maximum(total(values[None] ** 2), TINY)
+    scale = np.maximum(total(values[None]) / square, TINY)
+    place = np.log(np.maximum(total(power - values) / square, 1e-3 * scale))
+    lowest = np.log(EMPTY * scale)
     for _ in range(NEWTON):
-        size = np.exp(place)
-        share = size / (1 + size * values)
-        slope = (power * share / (1 + size * values) - share * values).sum()
-        curve = (
-            power * share * (1 - size * values) / (1 + size * values) ** 2
-            - share * values / (1 + size * values)
-        ).sum()
-        change = -slope / curve if curve < 0 else np.sign(slope)
-        change = float(np.clip(change, -2, 2))
+        size = np.repeat(np.exp(place), members, axis=1)[:, :, None]
+        damp = 1 / (1 + size * values)
+        signal, shrunk = power * size * damp**2, size * values * damp
+        slope = total(signal - shrunk)
+        curve = total(signal * (2 * damp - 1) - shrunk * damp)
+        change = np.where(curve < 0, -slope / np.minimum(curve, -TINY), np.sign(slope))
+        change = np.clip(change, -2, 2)
+        change[place < lowest] = 0
         place += change
-        if abs(change) < 1e-10 or place < -80:
+        if np.abs(change).max() < SETTLED:
             break
-    return float(np.exp(place))
+    return np.exp(place)
