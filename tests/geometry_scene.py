@@ -49,9 +49,17 @@ def texture(grid: Grid, refinement: tuple[int, int, int], seed: int) -> Specimen
     return Specimen(grid, species(), maps, refinement, "invented")
 
 
-def apparatus(grid: Grid = GRID, **layer: float) -> Instrument:
-    sensor = {"depth_um": 0.6, "thickness_um": 2.0, "crystal_cut": "100"} | layer
-    return instrument("camera", grid, pixel_um=grid.voxel[2] * 1e6, sensor_layer=sensor)
+def apparatus(grid: Grid = GRID, strength: float = 1e5) -> Instrument:
+    """A camera above a layer; `strength` of the nuclear gradients in mT/m."""
+    gradients = {
+        "nuclear_strength_mT_per_m": strength,
+        "nuclear_pulse_max_ms": 1e7 / strength,
+        "sensor_strength_mT_per_m": 1e5,
+        "sensor_pulse_max_us": 100.0,
+    }
+    sensor = {"depth_um": 0.6, "thickness_um": 2.0, "crystal_cut": "100"}
+    pixel = grid.voxel[2] * 1e6
+    return instrument("camera", grid, pixel, sensor_layer=sensor, gradients=gradients)
 
 
 def table(grid: Grid = GRID, shots: int = 24, seed: int = 3, **changes: object) -> Protocol:
