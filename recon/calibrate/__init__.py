@@ -1,1 +1,1 @@
-"""What is measured and not assumed: estimators with standard errors, and their report."""
+"""What a record tells of the apparatus: corrections to the descriptions, with standard errors."""

@@ -1,0 +1,152 @@
+"""Standoff, layer thickness and bias direction from a record of something unknown.
+
+These leave the blocks of AᴴWA exact, so the evidence of a stationary Gaussian prior
+(`recon.calibrate.stationary`) can be maximised over them together with the prior's own
+hyperparameters. The unknown is taken as complex and its components, an orthonormal basis of what
+the species do over time, as independent: a phase common to all shots then drops out.
+
+Depth and height above the face act alike: what tells them apart is that nothing lies below the
+face and that planes resemble each other. So the standard error, the inverse Hessian of the
+evidence with the prior's numbers at their best, is that of a sample which the prior describes.
+"""
+
+from __future__ import annotations
+
+from collections.abc import Sequence
+from dataclasses import dataclass, replace
+
+import numpy as np
+from numpy.typing import NDArray
+
+from recon.calibrate.ascent import GeometryFit, chosen, concluded
+from recon.calibrate.climb import climb
+from recon.calibrate.compressed import Compressed, Progress, compress, inside
+from recon.calibrate.estimate import Estimate
+from recon.calibrate.geometry_parameters import (
+    BIAS,
+    LAYER,
+    Quantity,
+    described,
+    nominal_values,
+)
+from recon.calibrate.identifiable import told
+from recon.calibrate.stationary import evidence
+from recon.errors import InputError
+from recon.forward import ForwardModel, Statistics, accumulate
+from recon.record import Record
+
+FloatArray = NDArray[np.floating]
+
+BLOCKS_STAY = frozenset(one.name for one in LAYER + BIAS)
+ROUNDING = 1e-7
+"""Error of the evidence, in parts of the record's energy, from statistics in single precision."""
+
+
+def standoff_from_record(
+    record: Record,
+    quantities: Sequence[Quantity | str] = LAYER[:1],
+    stated: Sequence[Estimate] = (),
+    *,
+    shots: NDArray[np.integer] | None = None,
+    components: int | None = None,
+    progress: Progress | None = None,
+) -> GeometryFit:
+    """Estimate standoff, thickness and bias direction without knowing the sample.
+
+    Parameters
+    ----------
+    quantities
+        Of `LAYER` and `BIAS`.
+    stated
+        Values to keep; gradients that are off the lattice are rounded to it.
+    shots, components
+        Part of the record to use: shots by number, and how many components of the time axis.
+    progress
+        Called as progress(passes, most passes).
+
+    Raises
+    ------
+    InputError
+        A quantity breaks the blocks, or the record has several evolution times.
+    """
+    unknown, values = chosen(quantities, stated, nominal_values(record.instrument))
+    for one in unknown:
+        if one.name not in BLOCKS_STAY:
+            raise InputError(
+                f"{one.name} breaks the blocks", "calibration", "use gradients_from_record"
+            )
+    data = unmixed(record, shots, components)
+    search = _Search(data, unknown, values)
+    return search.run(stated, progress)
+
+
+def unmixed(
+    record: Record, shots: NDArray[np.integer] | None, components: int | None
+) -> Compressed:
+    """The record in an orthonormal time basis that all shots share.
+
+    Raises
+    ------
+    InputError
+        The record has several evolution times, or a number of components below 1 is asked for.
+    """
+    if len(record.protocol.evolutions[0]) > 1:
+        raise InputError(
+            "has several evolution times", record.where, "calibrate with a sample that is known"
+        )
+    if components is not None and components < 1:
+        raise InputError(f"{components} components", "calibration", "use at least 1")
+    shots = inside(record.protocol, record.specimen.grid) if shots is None else shots
+    data = compress(record, shots)
+    return data if components is None else data.strongest(components)
+
+
+def block_statistics(data: Compressed, values: dict[str, float]) -> Statistics:
+    """b and G of the compressed record at a geometry, wavevectors rounded to the lattice."""
+    grid = data.record.specimen.grid
+    apparatus, table = described(data.record.instrument, data.protocol, values)
+    step = np.array(grid.lattice_step[::-1])
+    nuclear = table.nuclear_wavevector.copy()
+    nuclear[:, :2] = np.rint(nuclear[:, :2] / step) * step
+    table = replace(
+        table,
+        nuclear_wavevector=nuclear,
+        sensor_wavevector=np.rint(table.sensor_wavevector / step) * step,
+    )
+    count = data.samples.shape[1]
+    model = ForwardModel.build(grid, apparatus, table, np.eye(count), data.record.noise_sd)
+    return accumulate(model, [(slice(0, len(data)), data.samples)])
+
+
+@dataclass(eq=False)
+class _Search:
+    """Newton's method on the evidence."""
+
+    data: Compressed
+    unknown: tuple[Quantity, ...]
+    values: dict[str, float]
+    passes: int = 0
+
+    def run(self, stated: Sequence[Estimate], progress: Progress | None) -> GeometryFit:
+        reach = np.array([one.reach for one in self.unknown])
+        begin = np.array([self.values[one.name] for one in self.unknown]) / reach
+        steps = np.array([one.step for one in self.unknown]) / reach
+        least = np.array([one.least for one in self.unknown]) / reach
+        noise = ROUNDING * self.data.energy
+        point, hessian = climb(self._value, begin, steps, least, noise, progress)
+        judged = told(hessian / np.outer(reach, reach), self.unknown)
+        values = self._values_of(point)
+        best = evidence(block_statistics(self.data, values))
+        samples = self.data.samples.size + self.data.rest_count
+        misfit = (self.data.energy - best.explained + self.data.rest) / samples
+        return concluded(self.unknown, stated, values, judged, misfit, self.passes)
+
+    def _values_of(self, point: FloatArray) -> dict[str, float]:
+        values = dict(self.values)
+        for one, place in zip(self.unknown, point, strict=True):
+            values[one.name] = max(float(place * one.reach), one.least)
+        return values
+
+    def _value(self, point: FloatArray) -> float:
+        self.passes += 1
+        return evidence(block_statistics(self.data, self._values_of(point))).value
