@@ -20,7 +20,6 @@ from recon.calibrate.geometry_fit import geometry_from_sample
 from recon.calibrate.geometry_parameters import (
     BIAS,
     LAYER,
-    NUCLEAR_DELAY,
     NUCLEAR_MATRIX,
     SENSOR_MATRIX,
     SIGNAL,
@@ -33,7 +32,7 @@ from tests.descriptions import line
 from tests.geometry_scene import FINE, GRID, apparatus, measured, noisy, table, texture
 
 SIGNAL_TO_NOISE = (0.3, 0.6, 1.2)
-SEEDS = 4
+SEEDS = 3
 MATRIX = {
     "nuclear_matrix_xx": 1.03,
     "nuclear_matrix_xy": -0.03,
@@ -76,7 +75,7 @@ def test_a_sample_that_is_known_gives_standoff_and_gradients():
         lambda noisy: geometry_from_sample(noisy, SAMPLE, LAYER[:1] + SIGNAL + LATERAL),
         allowance=np.array([0.005, 0.002, 0.05, 1e-4, 1e-4, 1e-4, 1e-4]),
     )
-    # 84 errors of a normal distribution: 68 % within one standard error
+    # 63 errors of a normal distribution: 68 % within one standard error
     assert 0.5 < np.mean(np.abs(units) < 1) < 0.85, units
 
 
@@ -88,7 +87,7 @@ def test_standoff_from_a_sample_nobody_knows():
 
 
 def test_gradients_from_a_sample_nobody_knows():
-    record = measured(SAMPLE, NOMINAL, SHOTS, MATRIX)
+    record = measured(SAMPLE, NOMINAL, FLAT, MATRIX)
     units = errors_in_units(record, MATRIX, gradients_from_record, allowance=5e-4)
     assert 0.45 < np.mean(np.abs(units) < 1) < 0.9, units
 
@@ -234,7 +233,7 @@ def test_bias_tilts_with_the_standoff():
     truth = {"depth_um": 0.9, "bias_tilt_1_deg": 3.0, "bias_tilt_2_deg": -2.0}
     record = measured(SAMPLE, NOMINAL, FLAT, truth)
     fit = geometry_from_sample(
-        noisy(record, spread(record) / 2, 0), SAMPLE, LAYER[:1] + BIAS + SIGNAL + NUCLEAR_DELAY[:0]
+        noisy(record, spread(record) / 2, 0), SAMPLE, LAYER[:1] + BIAS + SIGNAL
     )
     for name, value in truth.items():
         assert abs(fit[name].value - value) < 4 * fit[name].standard_error, str(fit)

@@ -90,7 +90,6 @@ def compress(
     shots: NDArray[np.integer] | None = None,
     *,
     species: Sequence[Species] = (),
-    progress: Progress | None = None,
 ) -> Compressed:
     """Read the record once and reduce its time axis.
 
@@ -111,22 +110,11 @@ def compress(
         raise InputError(
             f"shots to use must be among 0 to {len(record) - 1}", record.where, "pick others"
         )
-    bases = [
-        np.linalg.svd(
-            species_basis(
-                species or record.specimen.species,
-                record.instrument,
-                record.protocol,
-                float(evolution),
-            ),
-            full_matrices=False,
-        )
-        for evolution in record.protocol.evolutions[0]
-    ]
-    group = record.protocol.evolutions[1]
     wanted = np.zeros(len(record), bool)
     wanted[shots] = True
-    images, rest, times = [], 0.0, len(record.protocol.sample_times)
+    group = record.protocol.evolutions[1]
+    bases = _bases(record, species or record.specimen.species)
+    images, rest = [], 0.0
     for where, block in record.shots():
         for shot, samples in zip(range(where.start, where.stop), block, strict=True):
             if wanted[shot]:
@@ -135,13 +123,25 @@ def compress(
                 images.append(image)
                 left = np.linalg.norm(samples) ** 2 - np.linalg.norm(image) ** 2
                 rest += float(left * record.weights[shot])
-        if progress is not None:
-            progress(where.stop, len(record))
-    samples = np.stack(images)
+    held = np.stack(images)
     mixing = np.stack([values[:, None] * right for _, values, right in bases])[group[wanted]]
-    count = len(samples) * (times - samples.shape[1]) * int(np.prod(samples.shape[2:]))
+    outside = len(record.protocol.sample_times) - held.shape[1]
+    count = len(held) * outside * int(np.prod(held.shape[2:]))
     protocol = record.protocol.subset(np.flatnonzero(wanted))
-    return Compressed(record, protocol, samples, mixing, record.weights[wanted], rest, count)
+    return Compressed(record, protocol, held, mixing, record.weights[wanted], rest, count)
+
+
+def _bases(
+    record: Record, species: Sequence[Species]
+) -> list[tuple[ComplexArray, FloatArray, ComplexArray]]:
+    """U, singular values, and the rest of Φ for every evolution time."""
+    instrument, protocol = record.instrument, record.protocol
+    return [
+        np.linalg.svd(
+            species_basis(species, instrument, protocol, float(evolution)), full_matrices=False
+        )
+        for evolution in protocol.evolutions[0]
+    ]
 
 
 def inside(protocol: Protocol, grid: Grid, edge: float = EDGE) -> NDArray[np.integer]:

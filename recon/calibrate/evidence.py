@@ -114,7 +114,9 @@ def block_statistics(data: Compressed, values: dict[str, float]) -> Statistics:
         sensor_wavevector=np.rint(table.sensor_wavevector / step) * step,
     )
     count = data.samples.shape[1]
-    model = ForwardModel.build(grid, apparatus, table, np.eye(count), data.record.noise_sd)
+    model = ForwardModel.build(
+        grid, apparatus, table, np.eye(count, dtype=complex), data.record.noise_sd
+    )
     return accumulate(model, [(slice(0, len(data)), data.samples)])
 
 

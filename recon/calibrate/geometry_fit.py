@@ -7,7 +7,7 @@ central differences of the general operator, which takes wavevectors off the lat
 
 from __future__ import annotations
 
-from collections.abc import Iterator, Sequence
+from collections.abc import Callable, Iterator, Sequence
 from dataclasses import dataclass, replace
 
 import numpy as np
@@ -245,7 +245,9 @@ class WaveDerivatives:
         The table around which they are taken.
     """
 
-    def __init__(self, images, protocol: Protocol, grid: Grid) -> None:  # type: ignore[no-untyped-def]
+    def __init__(
+        self, images: Callable[[Protocol], ComplexArray], protocol: Protocol, grid: Grid
+    ) -> None:
         self._images, self._protocol = images, protocol
         lateral = WAVE_STEP * np.array(grid.lattice_step[::-1])
         axial = WAVE_STEP * 2 * np.pi / (grid.shape[0] * grid.voxel[0])

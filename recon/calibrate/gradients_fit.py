@@ -36,6 +36,7 @@ from recon.errors import InputError
 from recon.forward.general import GeneralOperator
 from recon.forward.general_model import GeneralModel
 from recon.forward.statistics import Statistics
+from recon.instrument import Instrument
 from recon.protocol import Protocol
 from recon.record import Record
 
@@ -150,11 +151,11 @@ class _Separable:
         information -= 2 * (lined.reshape(count, -1).conj() @ taken.reshape(count, -1).T).real
         return Evaluation(-cost, score, information, cost / self.data.samples.size)
 
-    def _operator(self, apparatus, table: Protocol, components: int) -> GeneralOperator:  # type: ignore[no-untyped-def]
+    def _operator(self, apparatus: Instrument, table: Protocol, components: int) -> GeneralOperator:
         grid = self.data.record.specimen.grid
         noise = self.data.record.noise_sd
         return GeneralOperator(
-            GeneralModel.build(grid, apparatus, table, np.eye(components), noise)
+            GeneralModel.build(grid, apparatus, table, np.eye(components, dtype=complex), noise)
         )
 
     def _columns(

@@ -84,7 +84,7 @@ class Shape:
         scale = scale.reshape(len(scale), -1).T
         factor = np.linalg.cholesky(self.axial(grid.shape[0]) + 1e-9 * np.eye(grid.shape[0]))
         whole = np.kron(np.eye(scale.shape[1] // grid.shape[0]), factor)
-        return scale[:, :, None] * whole
+        return np.asarray((scale[:, :, None] * whole).real)
 
 
 START = Shape(10e-6, 3.0, 0.5)
