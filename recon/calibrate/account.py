@@ -13,14 +13,18 @@ from numpy.typing import NDArray
 from recon.calibrate.calibration import Calibrated
 from recon.calibrate.consistency import ShotFactors
 from recon.calibrate.drift import Drift
+from recon.calibrate.geometry import FoundGeometry
 from recon.counts.channel_state import State
 from recon.counts.conversion import Conversion
 from recon.figures.verdicts import Verdict
+from recon.instrument import Instrument
 from recon.physics.photons import phase_per_field
 
 GAIN_PERCENT, CHANNELS_PERCENT, NOISE_PERCENT = 10.0, 5.0, 15.0
 PHASE_RAD, JITTER_RAD, COMMON_PERCENT, LIGHT_PERCENT = 0.1, 0.3, 3.0, 10.0
 MAINS_HZ, PICKUP_PPM, LOST_PERCENT, OFFSET_HZ = 0.2, 100.0, 10.0, 5.0
+ALLOWED = {"um": 0.3, "deg": 0.5, "us": 20.0}
+RATIO = 0.01
 MEDIAN = 1.2533
 """Standard error of a median over that of a mean, for normal noise: √(π/2)."""
 
@@ -44,6 +48,37 @@ def record_verdicts(calibrated: Calibrated) -> Iterator[Verdict]:
         lost = calibrated.decay.lost
         advice = "it is carried in the amplitudes; put the shots that matter most first"
         yield Verdict(lost.name, "%", lost.value, lost.standard_error, 0.0, LOST_PERCENT, advice)
+
+
+def geometry_verdicts(nominal: Instrument, found: FoundGeometry) -> Iterator[Verdict]:
+    """Standoff, layer, bias direction, strengths, rotation and shear of the gradients."""
+    layer = nominal.sensor_layer
+    expected = {"depth_um": layer.depth_um, "thickness_um": layer.thickness_um}
+    matrices = [one for one in found.estimates if "_matrix_" not in one.name]
+    for one in (*matrices, *found.derived):
+        if one.fixed or not one.known:
+            continue
+        name = one.name.rsplit("_", 1)[0] if one.unit in ("um", "deg", "us") else one.name
+        ratio = "strength" in one.name or "magnification" in one.name or "scale" in one.name
+        carried = any(other.name == one.name for other in found.carried) or (
+            one.unit != "um" and any("_matrix_" in other.name for other in found.carried)
+        )
+        yield Verdict(
+            _told(name),
+            "of the description" if ratio else one.unit,
+            one.value,
+            one.standard_error,
+            expected.get(one.name, 1.0 if ratio else 0.0),
+            ALLOWED.get(one.unit, RATIO),
+            ("it is carried in" if carried else "too small to be carried in")
+            + "; correct the description",
+        )
+
+
+def _told(name: str) -> str:
+    """A quantity's name in words."""
+    words = {"depth": "standoff (depth of the layer)", "thickness": "thickness of the layer"}
+    return words.get(name, name.replace("_", " "))
 
 
 def excess(values: NDArray[np.floating], errors: NDArray[np.floating]) -> tuple[float, float]:

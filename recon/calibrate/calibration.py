@@ -20,7 +20,9 @@ from recon.calibrate.consistency import ShotConsistency, ShotFactors, shot_facto
 from recon.calibrate.decay import Decay, measure_decay
 from recon.calibrate.drift import Drift, LineDrift, measure_drift
 from recon.calibrate.fixed import Fixed
+from recon.calibrate.geometry import FoundGeometry, Geometry, measure_geometry
 from recon.errors import InputError
+from recon.instrument import Instrument
 from recon.protocol import Protocol
 from recon.record import Record, RecordWriter
 from recon.solvers.estimate import Progress, silent
@@ -40,6 +42,8 @@ class Calibration:
         How the shots are made to agree, or None.
     decay
         Look for a decay of the polarisation; needs `shots`.
+    geometry
+        What of the geometry is estimated, or None.
     fixed
         What is given and not estimated.
     """
@@ -49,21 +53,24 @@ class Calibration:
         default_factory=lambda: ShotConsistency(frequency=True, rounds=2)
     )
     decay: bool = True
+    geometry: Geometry | None = field(default_factory=Geometry)
     fixed: Fixed = field(default_factory=Fixed)
 
 
 @dataclass(frozen=True, eq=False)
 class Calibrated:
-    """What was found, and the corrected record.
+    """What was found, and the corrected record; `nominal` is the instrument as described.
 
-    `drift`, `factors`, `decay` are None where nothing was estimated; `frequency_Hz` and
+    `drift`, `factors`, `decay`, `geometry` are None where nothing was estimated; `frequency_Hz` and
     `phase_rad` are the corrections that were applied to each shot.
     """
 
     record: Record
+    nominal: Instrument
     drift: Drift | None
     factors: ShotFactors | None
     decay: Decay | None
+    geometry: FoundGeometry | None
     frequency_Hz: FloatArray  # noqa: N815
     phase_rad: FloatArray
 
@@ -83,6 +90,7 @@ def calibrate(
         The record carries no description, cannot be followed, or cannot be written.
     """
     settings = settings or Calibration()
+    nominal = record.instrument
     fixed, shots = settings.fixed, len(record)
     drift, frequency = None, np.zeros(shots)
     if fixed.field_offset_Hz is not None:
@@ -104,8 +112,15 @@ def calibrate(
         if decay is None and settings.decay and shots >= 6:
             decay = _if_any(measure_decay(record.protocol, factors))
     protocol = _corrected_protocol(record.protocol, phase, decay)
+    geometry = None
+    if settings.geometry is not None or fixed.stated:
+        straight = replace(_turned(record, frequency), protocol=protocol)
+        wanted_geometry = settings.geometry or Geometry((), ())
+        geometry = measure_geometry(straight, wanted_geometry, fixed.stated, progress)
+        instrument, protocol = geometry.applied(straight)
+        record = replace(record, instrument=instrument)
     corrected = _written(record, path, protocol, frequency, progress)
-    return Calibrated(corrected, drift, factors, decay, frequency, phase)
+    return Calibrated(corrected, nominal, drift, factors, decay, geometry, frequency, phase)
 
 
 def shrunk(values: FloatArray, errors: FloatArray, *, about_mean: bool = False) -> FloatArray:

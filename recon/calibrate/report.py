@@ -11,7 +11,7 @@ import numpy as np
 from numpy.typing import NDArray
 
 from recon import figures
-from recon.calibrate.account import conversion_verdicts, record_verdicts
+from recon.calibrate.account import conversion_verdicts, geometry_verdicts, record_verdicts
 from recon.calibrate.calibration import Calibrated
 from recon.counts.conversion import Conversion
 from recon.figures.channel_maps import channel_maps
@@ -25,7 +25,10 @@ CAUTION = "Research use only; not for diagnosis."
 def all_verdicts(conversion: Conversion | None, calibrated: Calibrated) -> list[Verdict]:
     """One verdict per quantity, in the order in which they were found."""
     first = [] if conversion is None else list(conversion_verdicts(conversion))
-    return [*first, *record_verdicts(calibrated)]
+    found = [*first, *record_verdicts(calibrated)]
+    if calibrated.geometry is not None:
+        found += geometry_verdicts(calibrated.nominal, calibrated.geometry)
+    return found
 
 
 def write_report(
@@ -122,6 +125,13 @@ def _facts(
             "phase_rad": _listed(calibrated.phase_rad),
         },
     }
+    if calibrated.geometry is not None:
+        facts["geometry"] = [
+            {"name": one.name, "unit": one.unit, "value": one.value, "fixed": one.fixed}
+            | ({"standard_error": one.standard_error} if one.known else {})
+            for one in (*calibrated.geometry.estimates, *calibrated.geometry.derived)
+        ]
+        facts["undetermined"] = list(calibrated.geometry.lines)
     if conversion is not None:
         rows = conversion.rows
         facts["carrier"] = _carrier(conversion)

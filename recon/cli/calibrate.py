@@ -11,11 +11,23 @@ from recon.calibrate.calibration import Calibration, calibrate
 from recon.calibrate.consistency import ShotConsistency
 from recon.calibrate.drift import LineDrift
 from recon.calibrate.fixed import Fixed
+from recon.calibrate.geometry import Geometry
+from recon.calibrate.geometry_parameters import (
+    BIAS,
+    LAYER,
+    NUCLEAR_DELAY,
+    SENSOR_DELAY,
+    SENSOR_MATRIX,
+    WAVE,
+)
+from recon.calibrate.gradients_fit import LATERAL
 from recon.calibrate.report import all_verdicts, write_report
 from recon.cli.common import progress_line
 from recon.counts.conversion import convert
 from recon.counts.record import CountsRecord, holds_counts
+from recon.errors import InputError
 from recon.record import Record
+from recon.specimen import Specimen
 
 
 @click.command("calibrate")
@@ -36,6 +48,19 @@ from recon.record import Record
 )
 @click.option("--without-drift", is_flag=True, help="Do not follow the field.")
 @click.option("--without-shots", is_flag=True, help="Do not compare the shots with each other.")
+@click.option(
+    "--geometry",
+    default="depth_um,nuclear",
+    show_default=True,
+    help="What of the geometry is estimated, by commas: depth_um, thickness_um, bias, nuclear, "
+    "sensor, delays; or none.",
+)
+@click.option(
+    "--sample",
+    type=click.Path(path_type=Path),
+    default=None,
+    help="TOML of a specimen with maps, if what was measured is known.",
+)
 def verb(
     measured: Path,
     output: Path,
@@ -44,11 +69,14 @@ def verb(
     reference_line: tuple[str, ...],
     without_drift: bool,
     without_shots: bool,
+    geometry: str,
+    sample: Path | None,
 ) -> None:
     """Estimate from MEASURED (counts or a record) what the description only guesses."""
     settings = Calibration(
         drift=None if without_drift else LineDrift(tuple(reference_line)),
         shots=None if without_shots else ShotConsistency(frequency=not without_drift, rounds=2),
+        geometry=geometry_named(geometry, sample),
         fixed=Fixed() if fixed is None else Fixed.from_toml(fixed),
     )
     with progress_line() as line, tempfile.TemporaryDirectory() as scratch:
@@ -65,6 +93,38 @@ def verb(
         found = all_verdicts(conversion, calibrated)
     for one in found:
         click.echo(f"  {one}")
+    for told in () if calibrated.geometry is None else calibrated.geometry.lines:
+        click.echo(f"note: {told}")
     for finding in () if conversion is None else conversion.findings:
         click.echo(f"note: {finding}")
     click.echo(f"{output}: calibrated record; report of {len(written)} files in {report}")
+
+
+def geometry_named(text: str, sample: Path | None) -> Geometry | None:
+    """The quantities behind short names.
+
+    Raises
+    ------
+    InputError
+        There is no such name.
+    """
+    if text.strip() == "none":
+        return None
+    groups = {
+        "depth_um": LAYER[:1],
+        "thickness_um": LAYER[1:],
+        "bias": BIAS,
+        "nuclear": LATERAL,
+        "sensor": SENSOR_MATRIX,
+        "delays": NUCLEAR_DELAY + SENSOR_DELAY,
+    }
+    picked = [one.strip() for one in text.split(",") if one.strip()]
+    wrong = [one for one in picked if one not in groups]
+    if wrong:
+        raise InputError(f"'{wrong[0]}' is none of {', '.join(groups)}", "--geometry")
+    names = [quantity.name for one in picked for quantity in groups[one]]
+    return Geometry(
+        tuple(name for name in names if name not in WAVE),
+        tuple(name for name in names if name in WAVE),
+        None if sample is None else Specimen.from_toml(sample),
+    )

@@ -1,0 +1,167 @@
+"""Which of the geometry is estimated, from what, and what of it is worth carrying in.
+
+Gradients come first, since a wrong one blurs the image from which the standoff is told. A
+correction that noise may explain, or that turns no phase in the view noticeably, is reported but
+not carried in: it would cost the blocks their exactness and gain nothing.
+"""
+
+from __future__ import annotations
+
+from collections.abc import Sequence
+from dataclasses import dataclass, replace
+
+import numpy as np
+from numpy.typing import NDArray
+from scipy.ndimage import uniform_filter
+
+from recon.calibrate.ascent import GeometryFit
+from recon.calibrate.decomposition import decomposition
+from recon.calibrate.estimate import Estimate
+from recon.calibrate.evidence import standoff_from_record
+from recon.calibrate.geometry_fit import geometry_from_sample
+from recon.calibrate.geometry_parameters import EVERY, WAVE, with_geometry
+from recon.calibrate.gradients_fit import LATERAL, gradients_from_record
+from recon.instrument import Instrument
+from recon.protocol import Protocol
+from recon.record import Record
+from recon.solvers.estimate import Progress
+from recon.specimen import Specimen
+
+SIGNIFICANT = 3.0
+"""Standard errors that a correction must be away from the description to be carried in."""
+
+NOTICEABLE_STEPS = 0.02
+"""Change of the largest wavevector, in lattice steps, below which gradients stay nominal."""
+
+
+@dataclass(frozen=True)
+class Geometry:
+    """What is estimated.
+
+    Attributes
+    ----------
+    layer
+        Names of the layer's and the bias field's quantities.
+    gradients
+        Names of the gradients' quantities.
+    sample
+        A specimen with maps that was measured, or None where it is unknown.
+    """
+
+    layer: tuple[str, ...] = ("depth_um",)
+    gradients: tuple[str, ...] = tuple(one.name for one in LATERAL)
+    sample: Specimen | None = None
+
+
+@dataclass(frozen=True, eq=False)
+class FoundGeometry:
+    """Estimates of the geometry.
+
+    Attributes
+    ----------
+    estimates
+        As they were found or stated.
+    derived
+        Strengths, rotation and shear that follow.
+    carried
+        Those that are carried into the descriptions.
+    lines
+        What the record cannot tell.
+    """
+
+    estimates: tuple[Estimate, ...]
+    derived: tuple[Estimate, ...]
+    carried: tuple[Estimate, ...]
+    lines: tuple[str, ...]
+
+    def applied(self, record: Record) -> tuple[Instrument, Protocol]:
+        """The record's descriptions with what is carried."""
+        return with_geometry(record.instrument, record.protocol, self.carried)
+
+
+def measure_geometry(
+    record: Record, settings: Geometry, stated: Sequence[Estimate], progress: Progress
+) -> FoundGeometry:
+    """Estimate what is asked for and not stated."""
+    record = without_gaps(record)
+    names = {one.name for one in stated}
+    gradients = [name for name in settings.gradients if name not in names]
+    layer = [name for name in settings.layer if name not in names]
+
+    def show(done: int, most: int) -> None:
+        progress("comparing geometries", done / max(most, 1))
+
+    fits: list[GeometryFit] = []
+    if settings.sample is not None:
+        wanted = [*layer, *gradients]
+        if wanted:
+            fits.append(
+                geometry_from_sample(record, settings.sample, wanted, stated, progress=show)
+            )
+    else:
+        if gradients:
+            waves = [one for one in stated if one.name in EVERY]
+            fits.append(gradients_from_record(record, gradients, waves, progress=show))
+        if layer:
+            known = [*stated, *_carried(record, _own(fits, names))]
+            fits.append(standoff_from_record(record, layer, known, progress=show))
+    found = _own(fits, names)
+    derived = [one for fit in fits for one in decomposition(fit).estimates]
+    lines = [line for fit in fits for line in fit.undetermined]
+    carried = (*stated, *_carried(record, found))
+    return FoundGeometry((*found, *stated), tuple(derived), carried, tuple(lines))
+
+
+def _own(fits: Sequence[GeometryFit], stated: set[str]) -> list[Estimate]:
+    """What the fits estimated themselves; the first to do so counts."""
+    found: dict[str, Estimate] = {}
+    for fit in fits:
+        for one in fit.estimates:
+            if not one.fixed and one.name not in stated:
+                found.setdefault(one.name, one)
+    return list(found.values())
+
+
+def _carried(record: Record, found: Sequence[Estimate]) -> list[Estimate]:
+    """Corrections that are significant and noticeable; a matrix is carried whole or not at all."""
+    waves = [one for one in found if one.name in WAVE]
+    others = [one for one in found if one.name not in WAVE and _significant(record, one)]
+    if not waves or not any(_significant(record, one) for one in waves):
+        return others
+    _, moved = with_geometry(record.instrument, record.protocol, waves)
+    step = np.array(record.specimen.grid.lattice_step)[::-1]
+    change = (
+        np.abs(moved.nuclear_wavevector[:, :2] - record.protocol.nuclear_wavevector[:, :2]) / step
+    )
+    turn = np.abs(moved.sensor_wavevector - record.protocol.sensor_wavevector) / step
+    noticeable = max(change.max(), turn.max()) > NOTICEABLE_STEPS
+    return [*waves, *others] if noticeable else others
+
+
+def _significant(record: Record, one: Estimate) -> bool:
+    nominal = EVERY[one.name].nominal
+    if nominal is None:
+        nominal = float(getattr(record.instrument.sensor_layer, one.name))
+    return one.known and abs(one.value - nominal) > SIGNIFICANT * one.standard_error
+
+
+def without_gaps(record: Record) -> Record:
+    """The record with channels that carry no weight filled by the mean of their neighbours."""
+    weight = record.channel_weight
+    if weight is None or weight.min() > 0:
+        return record
+    alive = (weight > 0).astype(np.float32)
+    share = uniform_filter(alive, 3, mode="nearest")
+    samples = record.samples_in_memory().copy()
+    dead = weight == 0
+    for shot in samples:
+        shot[:, dead] = _neighbours(shot * alive, share)[:, dead]
+    return replace(record, source=samples, channel_weight=None)
+
+
+def _neighbours(images: NDArray[np.complex64], share: NDArray[np.float32]) -> NDArray[np.complex64]:
+    size = (1, 3, 3)
+    mean = uniform_filter(images.real, size, mode="nearest") + 1j * uniform_filter(
+        images.imag, size, mode="nearest"
+    )
+    return np.asarray(mean / np.maximum(share, 1e-6), np.complex64)
