@@ -65,7 +65,7 @@ def geometry_verdicts(nominal: Instrument, found: FoundGeometry) -> Iterator[Ver
         )
         yield Verdict(
             _told(name),
-            "of the description" if ratio else one.unit,
+            "of the description" if ratio else one.unit.replace("1", "ratio"),
             one.value,
             one.standard_error,
             expected.get(one.name, 1.0 if ratio else 0.0),

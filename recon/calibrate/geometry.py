@@ -11,8 +11,6 @@ from collections.abc import Sequence
 from dataclasses import dataclass, replace
 
 import numpy as np
-from numpy.typing import NDArray
-from scipy.ndimage import uniform_filter
 
 from recon.calibrate.ascent import GeometryFit
 from recon.calibrate.decomposition import decomposition
@@ -146,22 +144,13 @@ def _significant(record: Record, one: Estimate) -> bool:
 
 
 def without_gaps(record: Record) -> Record:
-    """The record with channels that carry no weight filled by the mean of their neighbours."""
+    """The record with channels that carry no weight at zero.
+
+    A few zeros lower every spatial frequency alike; filling them from their neighbours would lower
+    high ones more, which looks like a greater standoff.
+    """
     weight = record.channel_weight
     if weight is None or weight.min() > 0:
-        return record
-    alive = (weight > 0).astype(np.float32)
-    share = uniform_filter(alive, 3, mode="nearest")
-    samples = record.samples_in_memory().copy()
-    dead = weight == 0
-    for shot in samples:
-        shot[:, dead] = _neighbours(shot * alive, share)[:, dead]
+        return replace(record, channel_weight=None)
+    samples = record.samples_in_memory() * (weight > 0)
     return replace(record, source=samples, channel_weight=None)
-
-
-def _neighbours(images: NDArray[np.complex64], share: NDArray[np.float32]) -> NDArray[np.complex64]:
-    size = (1, 3, 3)
-    mean = uniform_filter(images.real, size, mode="nearest") + 1j * uniform_filter(
-        images.imag, size, mode="nearest"
-    )
-    return np.asarray(mean / np.maximum(share, 1e-6), np.complex64)
