@@ -13,7 +13,7 @@ evidence with the prior's numbers at their best, is that of a sample which the p
 from __future__ import annotations
 
 from collections.abc import Sequence
-from dataclasses import dataclass, replace
+from dataclasses import dataclass
 
 import numpy as np
 from numpy.typing import NDArray
@@ -26,20 +26,19 @@ from recon.calibrate.geometry_parameters import (
     BIAS,
     LAYER,
     Quantity,
-    described,
     nominal_values,
 )
 from recon.calibrate.identifiable import told
+from recon.calibrate.shifted import block_statistics
 from recon.calibrate.stationary import evidence
 from recon.errors import InputError
-from recon.forward import ForwardModel, Statistics, accumulate
 from recon.record import Record
 
 FloatArray = NDArray[np.floating]
 
 BLOCKS_STAY = frozenset(one.name for one in LAYER + BIAS)
-ROUNDING = 1e-7
-"""Error of the evidence, in parts of the record's energy, from statistics in single precision."""
+ROUNDING = 1e-12
+"""Error of the evidence, in parts of the record's energy."""
 
 
 def standoff_from_record(
@@ -58,7 +57,7 @@ def standoff_from_record(
     quantities
         Of `LAYER` and `BIAS`.
     stated
-        Values to keep; gradients that are off the lattice are rounded to it.
+        Values to keep, calibrated gradients among them; these may lie off the lattice.
     shots, components
         Part of the record to use: shots by number, and how many components of the time axis.
     progress
@@ -99,25 +98,6 @@ def unmixed(
     shots = inside(record.protocol, record.specimen.grid) if shots is None else shots
     data = compress(record, shots)
     return data if components is None else data.strongest(components)
-
-
-def block_statistics(data: Compressed, values: dict[str, float]) -> Statistics:
-    """b and G of the compressed record at a geometry, wavevectors rounded to the lattice."""
-    grid = data.record.specimen.grid
-    apparatus, table = described(data.record.instrument, data.protocol, values)
-    step = np.array(grid.lattice_step[::-1])
-    nuclear = table.nuclear_wavevector.copy()
-    nuclear[:, :2] = np.rint(nuclear[:, :2] / step) * step
-    table = replace(
-        table,
-        nuclear_wavevector=nuclear,
-        sensor_wavevector=np.rint(table.sensor_wavevector / step) * step,
-    )
-    count = data.samples.shape[1]
-    model = ForwardModel.build(
-        grid, apparatus, table, np.eye(count, dtype=complex), data.record.noise_sd
-    )
-    return accumulate(model, [(slice(0, len(data)), data.samples)])
 
 
 @dataclass(eq=False)

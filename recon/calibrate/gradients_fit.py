@@ -20,7 +20,7 @@ from numpy.typing import NDArray
 from recon.calibrate.ascent import Evaluation, GeometryFit, ascend, chosen, concluded
 from recon.calibrate.compressed import Compressed, Progress
 from recon.calibrate.estimate import Estimate
-from recon.calibrate.evidence import block_statistics, unmixed
+from recon.calibrate.evidence import unmixed
 from recon.calibrate.geometry_fit import WaveDerivatives, stages
 from recon.calibrate.geometry_parameters import (
     NUCLEAR_MATRIX,
@@ -31,6 +31,7 @@ from recon.calibrate.geometry_parameters import (
     wave_directions,
 )
 from recon.calibrate.regularised import Regularised
+from recon.calibrate.shifted import block_statistics
 from recon.calibrate.stationary import START, Shape
 from recon.errors import InputError
 from recon.forward.general import GeneralOperator

@@ -1,7 +1,7 @@
 """(G + Γ⁻¹)⁻¹ for wavevectors off the lattice, by preconditioned conjugate gradients.
 
-In whitened unknowns x = L w, Γ = L Lᴴ, the system is 1 + LᴴGL; the blocks of the nearest lattice
-model precondition it. Source: Hestenes & Stiefel, J. Res. NBS 49:409 (1952).
+In whitened unknowns x = L w, Γ = L Lᴴ, the system is 1 + LᴴGL; the blocks that it nearly
+has precondition it. Source: Hestenes & Stiefel, J. Res. NBS 49:409 (1952).
 """
 
 from __future__ import annotations
@@ -26,7 +26,7 @@ class Regularised:
     Parameters
     ----------
     statistics
-        Of the nearest lattice model: layout and blocks of G.
+        Blocks that G nearly has, and their layout (`recon.calibrate.shifted`).
     shape, variance
         The prior; a variance for each component, (components,).
     """
@@ -101,7 +101,7 @@ class Regularised:
         return w + self._spread(operator.normal(self._collect(w)))
 
     def _cure(self, w: ComplexArray) -> ComplexArray:
-        """(1 + LᴴGL)⁻¹ of the nearest lattice model."""
+        """(1 + LᴴGL)⁻¹ of the blocks."""
         inner = np.einsum("kqp,ckq->ckp", self._vectors.conj(), w, optimize=True)
         inner /= 1 + self._sizes(len(w)) ** 2 * self._values
         return np.einsum("kqp,ckp->ckq", self._vectors, inner, optimize=True)
