@@ -27,6 +27,15 @@ class Fitted:
         Σ|residual|²/σ² over degrees of freedom per voxel, expectation 1, (nz, ny, nx).
     model
         Fitted time courses, complex64 (times, nz, ny, nx), A/m.
+    degrees_of_freedom
+        Complex residuals per voxel: dimensions less half the real parameters.
+    blank_ratio
+        Error of each amount were it absent, over its error, (patterns, nz).
+    correlation, partner
+        Largest |correlation| of each amount's error with another's, and whose, both
+        (patterns, nz, ny, nx).
+    bounds
+        Of shift, decay and phase; 0 where they are held.
     """
 
     names: tuple[str, ...]
@@ -38,6 +47,11 @@ class Fitted:
     nuisance_error: FloatArray
     chi_squared: FloatArray
     model: ComplexArray
+    degrees_of_freedom: float
+    blank_ratio: FloatArray
+    correlation: FloatArray
+    partner: NDArray[np.integer]
+    bounds: tuple[float, ...]
 
     def failed_assumption(self) -> str:
         """Which assumption the data refuse, by the size of nuisances in their own errors."""

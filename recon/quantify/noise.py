@@ -1,0 +1,69 @@
+"""The noise of a cube's time samples, voxel by voxel."""
+
+from __future__ import annotations
+
+from dataclasses import dataclass
+
+import numpy as np
+from numpy.typing import NDArray
+
+from recon.errors import InputError
+from recon.result import Cube
+
+FloatArray = NDArray[np.floating]
+
+
+@dataclass(frozen=True, eq=False)
+class VoxelNoise:
+    """White noise within the space that the cube's time courses span.
+
+    Attributes
+    ----------
+    sigma
+        Standard deviation of a complex sample, √E|n|², in each of the dimensions,
+        (nz, ny, nx), A/m.
+    dimensions
+        How many there are: the number of times, or of the singular vectors that were kept.
+    known
+        Voxels whose noise is known, and which hold information.
+    """
+
+    sigma: FloatArray
+    dimensions: int
+    known: NDArray[np.bool_]
+
+    @classmethod
+    def of(cls, cube: Cube, noise_sd: FloatArray | None = None) -> VoxelNoise:
+        """As stated (then white over all times), or from the cube's standard errors.
+
+        A cube that was reconstructed on r leading singular vectors holds noise in those alone: if
+        σ_t² are its errors over T times, each of the r dimensions has Σ σ_t²/r.
+
+        Raises
+        ------
+        InputError
+            No standard errors and none stated; none that is finite and positive.
+        """
+        dimensions = len(cube.values)
+        if noise_sd is None:
+            if cube.standard_error is None:
+                mend = "draw replicas, or state the noise"
+                raise InputError("has no standard errors", "cube", mend)
+            dimensions = rank_of(cube)
+            total = (cube.standard_error.astype(float) ** 2).sum(axis=0)
+            noise_sd = np.sqrt(total / dimensions)
+        sigma = np.array(np.broadcast_to(np.asarray(noise_sd, float), cube.grid.shape))
+        if (sigma < 0).any():
+            raise InputError("noise must not be negative", "fit")
+        known = np.isfinite(sigma) & (sigma > 0) & (cube.values != 0).any(axis=0)
+        if not known.any():
+            raise InputError("noise must be finite and somewhere positive", "fit")
+        sigma[~known] = sigma[known].max()
+        return cls(sigma.astype(np.float32), dimensions, known)
+
+
+def rank_of(cube: Cube) -> int:
+    """Number of independent time courses that the cube's voxels are made of."""
+    courses = cube.values.reshape(len(cube.values), -1)
+    values = np.linalg.eigvalsh((courses @ courses.conj().T).astype(complex))
+    return max(1, int((values > 1e-9 * values[-1]).sum()))
