@@ -7,13 +7,17 @@ from pathlib import Path
 import click
 import numpy as np
 
+from recon import figures as figures_of
 from recon.cli.common import progress_line
 from recon.quantify import (
     Baseline,
     CalibratedResponse,
     Fit,
+    Fitted,
     Nuisance,
     ReferenceSpecies,
+    labels,
+    limits,
     patterns_of,
 )
 from recon.record import Record
@@ -30,6 +34,9 @@ from recon.result import Account, Cube, SpeciesMaps
 @click.option("--baseline-ms", type=float, multiple=True, help="Decay of a broad baseline.")
 @click.option("--reference", default=None, help="Species of known amount that sets the scale.")
 @click.option("--reference-mM", "reference_amount", type=float, default=None)
+@click.option(
+    "--figures", type=click.Path(path_type=Path), default=None, help="Folder to draw into."
+)
 @click.option("--scale-error", type=float, default=0.0, help="Relative error of the scale.")
 def verb(
     cube: Path,
@@ -42,6 +49,7 @@ def verb(
     reference: str | None,
     reference_amount: float | None,
     scale_error: float,
+    figures: Path | None,
 ) -> None:
     """Fit every voxel of CUBE with the species of the RECORD it came from."""
     held, measured = Cube.load(cube), Record.open(record)
@@ -56,35 +64,69 @@ def verb(
         raise click.UsageError("give --reference and --reference-mM together")
     with progress_line() as line:
         fitted = settings.fit(held, patterns, progress=line.counted("fitting spectra"))
+    scale: CalibratedResponse | ReferenceSpecies = CalibratedResponse(scale_error)
     if reference is not None and reference_amount is not None:
         scale = ReferenceSpecies(reference, reference_amount, scale_error)
-        values, error = scale.apply(fitted.names, fitted.amounts, fitted.standard_error)
-    else:
-        known = CalibratedResponse(scale_error)
-        values, error = known.apply(fitted.names, fitted.amounts, fitted.standard_error)
+    fitted = scale.on(fitted)
     failed = fitted.failed_assumption()
     remarks = (f"assumption refused by the data: {failed}",) if failed else ()
-    SpeciesMaps(
-        grid=held.grid,
-        values=values.astype(np.float32),
-        standard_error=error.astype(np.float32),
-        account=Account(
-            prior=f"{held.account.prior}; then a fit of known lines in every voxel",
-            weights=held.account.weights,
-            why_stopped=held.account.why_stopped,
-            misfit=float(np.median(fitted.chi_squared)),
-            provenance=held.account.provenance,
-            remarks=(*held.account.remarks, *remarks),
-        ),
-        names=fitted.names,
-    ).save(output)
+    result = amounts_of(held, fitted, remarks)
+    result.save(output)
     click.echo(f"{output}: {len(fitted.names)} species")
-    heads = ("mean", "error", "detection", "quantify")
-    click.echo(f"{'lowest, mM':<14}" + "".join(f"{head:>12}" for head in heads))
-    for place, name in enumerate(fitted.names):
-        typical = float(np.sqrt((error[place, 0].astype(float) ** 2).mean()))
-        mean = float(values[place, 0].mean())
-        numbers = (mean, typical, 3.3 * typical, 10 * typical)
-        click.echo(f"{name:<14}" + "".join(f"{number:>12.4g}" for number in numbers))
+    click.echo(table(fitted))
     for remark in remarks:
         click.echo(f"note: {remark}")
+    if figures is not None:
+        for path in draw(result, figures):
+            click.echo(f"    {path}")
+
+
+def amounts_of(cube: Cube, fitted: Fitted, remarks: tuple[str, ...]) -> SpeciesMaps:
+    """The fit as maps with labels; the limits stand in the account's provenance."""
+    account = cube.account
+    return SpeciesMaps(
+        grid=cube.grid,
+        values=fitted.amounts,
+        standard_error=fitted.standard_error,
+        account=Account(
+            prior=f"{account.prior}; then a fit of known lines in every voxel",
+            weights=account.weights,
+            why_stopped=account.why_stopped,
+            misfit=float(np.median(fitted.chi_squared)),
+            provenance={**account.provenance, "limits": limits(fitted).facts()},
+            remarks=(*account.remarks, *remarks),
+        ),
+        names=fitted.names,
+        labels=labels(fitted),
+    )
+
+
+def table(fitted: Fitted) -> str:
+    """Mean, error and limits of every species at every depth, and the share worth reading."""
+    reach, readable = limits(fitted), labels(fitted).readable
+    heads = ("plane", "mean", "error", "detection", "quantify", "readable")
+    lines = [f"{'mM':<14}" + "".join(f"{head:>11}" for head in heads)]
+    for place, name in enumerate(fitted.names):
+        for level, values in enumerate(fitted.amounts[place]):
+            spread = fitted.standard_error[place, level]
+            spread = spread[np.isfinite(spread)]
+            error = float(np.sqrt((spread.astype(float) ** 2).mean())) if spread.size else np.inf
+            low, high = reach.detection[place, level], reach.quantification[place, level]
+            numbers = (float(values.mean()), error, float(low), float(high))
+            share = f"{100 * readable[place, level].mean():.0f} %"
+            cells = [f"{level + 1:>11d}", *(f"{number:>11.4g}" for number in numbers)]
+            lines.append(f"{name if level == 0 else '':<14}" + "".join(cells) + f"{share:>11}")
+    lines.append("limits: 3 and 10 standard errors of the blank (IUPAC), one voxel, by plane")
+    return "\n".join(lines)
+
+
+def draw(result: SpeciesMaps, folder: Path) -> list[Path]:
+    """The labels, and every species' planes with their errors beside them."""
+    assert result.labels is not None
+    assert result.standard_error is not None
+    picture = figures_of.label_maps(result.labels, result.names, result.grid)
+    written = [figures_of.save(picture, folder / "labels.png")]
+    for name, values, error in zip(result.names, result.values, result.standard_error, strict=True):
+        stack = figures_of.depth_stack(values, error, result.grid, quantity=name, unit="mM")
+        written.append(figures_of.save(stack, folder / f"{name}-planes.png"))
+    return written

@@ -5,6 +5,7 @@ Functions take arrays and a grid and give a matplotlib figure; `save` writes it.
 
 from recon.figures.depth_stack import depth_stack
 from recon.figures.history import Progress, history
+from recon.figures.label_maps import label_maps
 from recon.figures.maps import comparison, overview
 from recon.figures.protocol_coverage import coverage
 from recon.figures.sensitivity import sensitivity
@@ -20,6 +21,7 @@ __all__ = [
     "coverage",
     "depth_stack",
     "history",
+    "label_maps",
     "overview",
     "save",
     "sensitivity",

@@ -2,6 +2,7 @@
 
 from recon.quantify.fit import Fit
 from recon.quantify.fitted import Fitted
+from recon.quantify.limits import Limits, labels, limits
 from recon.quantify.nuisance import Nuisance
 from recon.quantify.patterns import Baseline, Pattern, patterns_of
 from recon.quantify.scale import CalibratedResponse, ReferenceSpecies
@@ -11,8 +12,11 @@ __all__ = [
     "CalibratedResponse",
     "Fit",
     "Fitted",
+    "Limits",
     "Nuisance",
     "Pattern",
     "ReferenceSpecies",
+    "labels",
+    "limits",
     "patterns_of",
 ]

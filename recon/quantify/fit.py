@@ -3,7 +3,8 @@
     y(t) = e^{iθ − i2πΔf t − Γt} Σ_p a_p φ_p(t) + Σ_b c_b β_b(t) + noise
 
 Real amounts a, nuisance phase θ, shift Δf and extra decay Γ per voxel, complex baseline c.
-Δf, Γ and θ are bounded and tied to their neighbourhood by a quadratic penalty. The standard error is the Cramér–Rao bound
+Δf, Γ and θ are bounded and tied to their neighbourhood by a quadratic penalty. The standard
+error is the Cramér–Rao bound
 
     F = 2 Re(Jᴴ J)/σ²,     E|n|² = σ² per complex sample,
 
@@ -62,8 +63,8 @@ class Fit:
         Parameters
         ----------
         noise_sd
-            Standard deviation of a complex time sample per voxel, (nz, ny, nx), A/m; by default from
-            the cube's standard errors. Voxels without (not finite, zero) hold no information.
+            Standard deviation of a complex time sample per voxel, (nz, ny, nx), A/m; by default
+            from the cube's standard errors. Voxels without (not finite, zero) hold no information.
 
         Raises
         ------

@@ -29,8 +29,8 @@ class Fitted:
         Fitted time courses, complex64 (times, nz, ny, nx), A/m.
     degrees_of_freedom
         Complex residuals per voxel: dimensions less half the real parameters.
-    blank_ratio
-        Error of each amount were it absent, over its error, (patterns, nz).
+    blank_error
+        Standard error of each amount were there none of it, mM, (patterns, nz, ny, nx).
     correlation, partner
         Largest |correlation| of each amount's error with another's, and whose, both
         (patterns, nz, ny, nx).
@@ -48,7 +48,7 @@ class Fitted:
     chi_squared: FloatArray
     model: ComplexArray
     degrees_of_freedom: float
-    blank_ratio: FloatArray
+    blank_error: FloatArray
     correlation: FloatArray
     partner: NDArray[np.integer]
     bounds: tuple[float, ...]

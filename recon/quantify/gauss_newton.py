@@ -10,6 +10,7 @@ from __future__ import annotations
 from collections.abc import Callable, Sequence
 from concurrent.futures import ThreadPoolExecutor
 from dataclasses import dataclass
+from functools import partial
 
 import numpy as np
 from numpy.typing import NDArray
@@ -56,7 +57,7 @@ class GaussNewton:
         self.free = [place for place, rule in enumerate(rules) if rule.free]
         courses = np.concatenate([pattern.courses for pattern in patterns], axis=1)
         self.scale = float(np.sqrt(np.mean(np.abs(courses) ** 2)))
-        self.courses = courses / self.scale
+        self.courses = np.asarray(courses / self.scale, complex)
         self.broad = baseline.courses(cube.sample_times)
         bound = rules[1].bound if rules[1].free else 0.0
         self.moments = Moments(self.courses, self.broad, cube.sample_times, bound)
@@ -81,7 +82,7 @@ class GaussNewton:
             self.start()
             for step in range(iterations if self.free else 0):
                 centres = self._neighbourhood()
-                self._each(lambda chunk, c=centres: self._step(chunk, c[chunk.where]))
+                self._each(partial(self._step, centres=centres))
                 if progress is not None:
                     progress(step + 1, iterations)
                 if np.sqrt(np.mean(self._moved**2)) < ENOUGH:
@@ -145,6 +146,7 @@ class GaussNewton:
     def _step(self, chunk: _Chunk, centres: FloatArray) -> None:
         """One step of the nuisances, halved where χ² with the ties would rise."""
         where, products = chunk.where, chunk.products
+        centres = centres[where]
         nuisance, linear = self.nuisance[where], self.linear[where]
         inverse, gradient = self._inverse(products, linear, where)
         first = linear.shape[1]
@@ -256,10 +258,11 @@ class GaussNewton:
     def predicted(self, where: slice) -> ComplexArray:
         """The model, (V, times)."""
         linear, parts = self.linear[where].astype(np.float32), self.members.shape[1]
-        lines = linear[:, :parts] @ self.courses.T.astype(np.complex64)
+        lines = linear[:, :parts].astype(np.complex64) @ self.courses.T.astype(np.complex64)
         broad = (linear[:, parts::2] + 1j * linear[:, parts + 1 :: 2]).astype(np.complex64)
-        lines *= self.moments.factor(self.nuisance[where])
-        return lines + broad @ self.broad.T.astype(np.complex64)
+        return lines * self.moments.factor(self.nuisance[where]) + broad @ self.broad.T.astype(
+            np.complex64
+        )
 
     def result(self) -> Fitted:
         """Amounts in mM; voxels of unknown noise get amount 0 and an infinite error."""
@@ -267,6 +270,7 @@ class GaussNewton:
         amounts = self.linear[:, : self.members.shape[1]] @ self.members.T / self.scale
         spread = np.sqrt(np.maximum(np.einsum("vpp->vp", self.covariance), 0)) / self.scale
         amounts[unknown], spread[unknown] = 0, np.inf
+        error = spread.T.reshape(count, *self.shape).astype(np.float32)
         model, rest = np.empty_like(self.signal), np.empty(len(self.signal))
         for chunk in self.chunks:
             model[chunk.where] = self.predicted(chunk.where)
@@ -278,7 +282,7 @@ class GaussNewton:
         return Fitted(
             names=tuple(p.name for p in self.patterns),
             amounts=amounts.T.reshape(count, *self.shape).astype(np.float32),
-            standard_error=spread.T.reshape(count, *self.shape).astype(np.float32),
+            standard_error=error,
             shift_Hz=shift,
             decay_per_s=decay,
             phase_rad=phase,
@@ -286,7 +290,7 @@ class GaussNewton:
             chi_squared=(rest / self.sigma**2 / degrees).reshape(self.shape).astype(np.float32),
             model=model.T.reshape(-1, *self.shape),
             degrees_of_freedom=degrees,
-            blank_ratio=self._blank_ratio(),
+            blank_error=error * self._blank_ratio()[:, :, None, None].astype(np.float32),
             correlation=like.T.reshape(count, *self.shape),
             partner=partner.T.reshape(count, *self.shape),
             bounds=tuple(rule.bound if rule.free else 0.0 for rule in self.rules),

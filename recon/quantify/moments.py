@@ -44,7 +44,7 @@ class Products:
     broad_pairs: ComplexArray
     energy: FloatArray
 
-    def put(self, where: FloatArray | NDArray[np.bool_], other: Products) -> None:
+    def put(self, where: NDArray[np.integer] | NDArray[np.bool_], other: Products) -> None:
         """Take over the voxels `where` from others."""
         for name in ("data", "pairs", "mixed", "broad_data", "energy"):
             getattr(self, name)[where] = getattr(other, name)
@@ -73,9 +73,7 @@ class Products:
             right[:, real], right[:, imag] = self.broad_data.real, self.broad_data.imag
         return normal, right
 
-    def full_system(
-        self, linear: FloatArray, free: list[int]
-    ) -> tuple[FloatArray, FloatArray]:
+    def full_system(self, linear: FloatArray, free: list[int]) -> tuple[FloatArray, FloatArray]:
         """The same with the derivatives by the free ones of (Δf, Γ, θ), at amounts `linear`.
 
         The right side is that of the residual.
@@ -187,9 +185,7 @@ class Moments:
         grid = coarse.astype(np.complex64)[:, :, None] * fine.astype(np.complex64)[:, None]
         return grid.reshape(len(nuisance), -1)[:, :count]
 
-    def products(
-        self, signal: ComplexArray, energy: FloatArray, nuisance: FloatArray
-    ) -> Products:
+    def products(self, signal: ComplexArray, energy: FloatArray, nuisance: FloatArray) -> Products:
         """Everything at the nuisances (V, 3) of signals (V, T)."""
         conjugate = self.factor(nuisance).conj()
         data = (conjugate * signal) @ self._probe
