@@ -16,10 +16,13 @@ from recon.quantify import (
     Fitted,
     Nuisance,
     ReferenceSpecies,
+    compare,
     labels,
     limits,
     patterns_of,
+    refused,
 )
+from recon.quantify.agreement import in_words
 from recon.record import Record
 from recon.result import Account, Cube, SpeciesMaps
 
@@ -35,6 +38,9 @@ from recon.result import Account, Cube, SpeciesMaps
 @click.option("--reference", default=None, help="Species of known amount that sets the scale.")
 @click.option("--reference-mM", "reference_amount", type=float, default=None)
 @click.option(
+    "--maps", type=click.Path(path_type=Path), default=None, help="Direct amounts to compare with."
+)
+@click.option(
     "--figures", type=click.Path(path_type=Path), default=None, help="Folder to draw into."
 )
 @click.option("--scale-error", type=float, default=0.0, help="Relative error of the scale.")
@@ -49,6 +55,7 @@ def verb(
     reference: str | None,
     reference_amount: float | None,
     scale_error: float,
+    maps: Path | None,
     figures: Path | None,
 ) -> None:
     """Fit every voxel of CUBE with the species of the RECORD it came from."""
@@ -68,8 +75,12 @@ def verb(
     if reference is not None and reference_amount is not None:
         scale = ReferenceSpecies(reference, reference_amount, scale_error)
     fitted = scale.on(fitted)
-    failed = fitted.failed_assumption()
-    remarks = (f"assumption refused by the data: {failed}",) if failed else ()
+    if maps is not None:
+        remarks = compare(SpeciesMaps.load(maps), fitted, held, patterns).remarks()
+    else:
+        found = refused(held, patterns)
+        told = in_words(found) if found else fitted.failed_assumption()
+        remarks = (f"assumption refused by the data: {told}",) if told else ()
     result = amounts_of(held, fitted, remarks)
     result.save(output)
     click.echo(f"{output}: {len(fitted.names)} species")

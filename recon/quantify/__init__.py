@@ -1,5 +1,7 @@
 """From spectra to amounts: fits of every voxel's spectrum, with errors, limits and reasons."""
 
+from recon.quantify.agreement import Agreement, compare
+from recon.quantify.assumptions import Refusal, refused
 from recon.quantify.fit import Fit
 from recon.quantify.fitted import Fitted
 from recon.quantify.limits import Limits, labels, limits
@@ -8,6 +10,7 @@ from recon.quantify.patterns import Baseline, Pattern, patterns_of
 from recon.quantify.scale import CalibratedResponse, ReferenceSpecies
 
 __all__ = [
+    "Agreement",
     "Baseline",
     "CalibratedResponse",
     "Fit",
@@ -16,7 +19,10 @@ __all__ = [
     "Nuisance",
     "Pattern",
     "ReferenceSpecies",
+    "Refusal",
+    "compare",
     "labels",
     "limits",
     "patterns_of",
+    "refused",
 ]

@@ -29,7 +29,7 @@ from recon.result import Cube
 ComplexArray = NDArray[np.complexfloating]
 FloatArray = NDArray[np.floating]
 
-BANDS = 3
+BANDS = 4
 LEADING = 32
 SURE = 50.0
 """Fall of χ² that counts at least."""
@@ -153,9 +153,7 @@ class _Test:
             if max(self.wave) > 0:
                 most = rate / max(self.wave) ** 2 * 1e9
                 grid = most * np.geomspace(0.05, 30, 20)
-                scans.append(
-                    (DIFFUSION, "um2/ms", grid, lambda v, u: np.exp(-v * 1e-9 * u**2 * t))
-                )
+                scans.append((DIFFUSION, "um2/ms", grid, lambda v, u: np.exp(-v * 1e-9 * u**2 * t)))
             found = [self._scanned(whose, *scan) for scan in scans]
             best += found
         return _one_or_all(best, self.names)

@@ -11,7 +11,6 @@ from dataclasses import dataclass
 
 import numpy as np
 from numpy.typing import NDArray
-from scipy.stats import gamma
 
 from recon.labels import Labels, Readability
 from recon.quantify.fitted import Fitted
@@ -82,18 +81,9 @@ def labels(fitted: Fitted) -> Labels:
     found[blended] = (Readability.BLENDED + partner[blended]).astype(np.uint8)
     at_bound = nuisance_at_bound(fitted) & detected.any(axis=0)
     found[:, at_bound] = Readability.NUISANCE_AT_BOUND
-    found[:, poor_fit(fitted)] = Readability.POOR_FIT
+    found[:, fitted.poor(CHANCE)] = Readability.POOR_FIT
     found[~np.isfinite(fitted.standard_error)] = Readability.NO_INFORMATION
     return Labels(found, meaning(fitted))
-
-
-def poor_fit(fitted: Fitted) -> NDArray[np.bool_]:
-    """Voxels whose χ² noise alone would exceed with probability `CHANCE`, (nz, ny, nx).
-
-    Σ|residual|²/σ² of n complex residuals follows a gamma law of shape n.
-    """
-    degrees = fitted.degrees_of_freedom
-    return np.asarray(fitted.chi_squared > gamma.isf(CHANCE, degrees) / degrees)
 
 
 def nuisance_at_bound(fitted: Fitted) -> NDArray[np.bool_]:
