@@ -12,10 +12,12 @@ from recon.cli.common import progress_line
 from recon.quantify import (
     Baseline,
     CalibratedResponse,
+    FieldShift,
     Fit,
     Fitted,
     Nuisance,
     ReferenceSpecies,
+    ShiftEstimate,
     compare,
     labels,
     limits,
@@ -38,6 +40,9 @@ from recon.result import Account, Cube, SpeciesMaps
 @click.option("--reference", default=None, help="Species of known amount that sets the scale.")
 @click.option("--reference-mM", "reference_amount", type=float, default=None)
 @click.option(
+    "--field-shift", is_flag=True, help="Take a smooth static field shift out of the cube first."
+)
+@click.option(
     "--maps", type=click.Path(path_type=Path), default=None, help="Direct amounts to compare with."
 )
 @click.option(
@@ -55,12 +60,16 @@ def verb(
     reference: str | None,
     reference_amount: float | None,
     scale_error: float,
+    field_shift: bool,
     maps: Path | None,
     figures: Path | None,
 ) -> None:
     """Fit every voxel of CUBE with the species of the RECORD it came from."""
     held, measured = Cube.load(cube), Record.open(record)
     patterns = patterns_of(measured.specimen.species, measured.instrument, held)
+    moved = ShiftEstimate(shift_bound).estimate(held, patterns) if field_shift else None
+    if moved is not None:
+        held = moved.corrected(held)
     settings = Fit(
         shift_Hz=Nuisance(shift_bound, 3.0),
         decay_per_s=Nuisance(np.pi * width_bound, 5.0),
@@ -85,10 +94,10 @@ def verb(
     result.save(output)
     click.echo(f"{output}: {len(fitted.names)} species")
     click.echo(table(fitted))
-    for remark in remarks:
+    for remark in (*held.account.remarks[-1:], *remarks) if moved is not None else remarks:
         click.echo(f"note: {remark}")
     if figures is not None:
-        for path in draw(result, figures):
+        for path in draw(result, moved, figures):
             click.echo(f"    {path}")
 
 
@@ -131,8 +140,8 @@ def table(fitted: Fitted) -> str:
     return "\n".join(lines)
 
 
-def draw(result: SpeciesMaps, folder: Path) -> list[Path]:
-    """The labels, and every species' planes with their errors beside them."""
+def draw(result: SpeciesMaps, moved: FieldShift | None, folder: Path) -> list[Path]:
+    """Labels, every species' planes with their errors beside them, and the field shift, if any."""
     assert result.labels is not None
     assert result.standard_error is not None
     picture = figures_of.label_maps(result.labels, result.names, result.grid)
@@ -140,4 +149,9 @@ def draw(result: SpeciesMaps, folder: Path) -> list[Path]:
     for name, values, error in zip(result.names, result.values, result.standard_error, strict=True):
         stack = figures_of.depth_stack(values, error, result.grid, quantity=name, unit="mM")
         written.append(figures_of.save(stack, folder / f"{name}-planes.png"))
+    if moved is not None:
+        stack = figures_of.depth_stack(
+            moved.shift_Hz, moved.standard_error_Hz, moved.grid, quantity="field shift", unit="Hz"
+        )
+        written.append(figures_of.save(stack, folder / "field-shift.png"))
     return written

@@ -2,6 +2,7 @@
 
 from recon.quantify.agreement import Agreement, compare
 from recon.quantify.assumptions import Refusal, refused
+from recon.quantify.field_shift import FieldShift, ShiftEstimate
 from recon.quantify.fit import Fit
 from recon.quantify.fitted import Fitted
 from recon.quantify.limits import Limits, labels, limits
@@ -13,6 +14,7 @@ __all__ = [
     "Agreement",
     "Baseline",
     "CalibratedResponse",
+    "FieldShift",
     "Fit",
     "Fitted",
     "Limits",
@@ -20,6 +22,7 @@ __all__ = [
     "Pattern",
     "ReferenceSpecies",
     "Refusal",
+    "ShiftEstimate",
     "compare",
     "labels",
     "limits",

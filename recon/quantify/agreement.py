@@ -80,7 +80,7 @@ class Agreement:
         told = ", ".join(
             f"{name} {spread:.2g}" for name, spread in zip(self.names, self.spread, strict=True)
         )
-        how = f"fitted and direct amounts differ by (r.m.s., standard errors of the difference) {told}"
+        how = f"fitted and direct amounts differ by {told} standard errors of the difference"
         if self.compatible:
             return (f"{how}: compatible",)
         lines = [f"{how}: not compatible; failed assumption: {self.failed_assumption}"]

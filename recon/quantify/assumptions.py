@@ -4,7 +4,7 @@ Every voxel's time course is taken as real amounts of fixed courses. For each wa
 be wrong, one parameter common to all voxels is scanned, and the fall of χ² it allows is noted:
 
     line position   φ_s(t) e^{−i2πΔt}         line width   φ_s(t) e^{−Γt}
-    phase           φ_s(t) e^{iθ}              diffusion    φ_s(t) e^{−D u² t} at lateral wavenumber u
+    phase           φ_s(t) e^{iθ}              diffusion    φ_s(t) e^{−D u² t} at wavenumber u
     unlisted line   one more course e^{−i2πft − rt}, its amount free in every voxel
 
 χ² is a sum over lateral bands, so that what decays faster at fine detail is told from what decays
@@ -86,7 +86,7 @@ def refused(
     cube: Cube,
     patterns: Sequence[Pattern],
     noise_sd: FloatArray | None = None,
-    shift_bound_Hz: float = 30.0,  # noqa: N803
+    shift_bound_Hz: float = 30.0,
 ) -> list[Refusal]:
     """What the cube refuses of fixed lines with amounts free, the worst first; empty if nothing.
 

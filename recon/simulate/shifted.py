@@ -21,7 +21,7 @@ BATCH = 8
 def shifted_fields(
     scene: Scene,
     courses: NDArray[np.complex64],
-    shift_Hz: FloatArray,  # noqa: N803
+    shift_Hz: FloatArray,
     progress: Progress | None,
 ) -> Samples:
     """What each shot's channels see, (shots, times, cy, cx), tesla.
