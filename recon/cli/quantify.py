@@ -2,19 +2,23 @@
 
 from __future__ import annotations
 
+from collections.abc import Sequence
 from pathlib import Path
 
 import click
 import numpy as np
 
 from recon import figures as figures_of
+from recon.basis import species_lines
 from recon.cli.common import progress_line
+from recon.instrument import Instrument
 from recon.quantify import (
     Baseline,
     CalibratedResponse,
     FieldShift,
     Fit,
     Fitted,
+    LineRemoval,
     Nuisance,
     ReferenceSpecies,
     ShiftEstimate,
@@ -27,6 +31,7 @@ from recon.quantify import (
 from recon.quantify.agreement import in_words
 from recon.record import Record
 from recon.result import Account, Cube, SpeciesMaps
+from recon.specimen import Species
 
 
 @click.command("quantify")
@@ -39,6 +44,12 @@ from recon.result import Account, Cube, SpeciesMaps
 @click.option("--baseline-ms", type=float, multiple=True, help="Decay of a broad baseline.")
 @click.option("--reference", default=None, help="Species of known amount that sets the scale.")
 @click.option("--reference-mM", "reference_amount", type=float, default=None)
+@click.option(
+    "--strong-line-ppm",
+    type=float,
+    default=None,
+    help="Take this line, such as water's, out of every voxel first.",
+)
 @click.option(
     "--field-shift", is_flag=True, help="Take a smooth static field shift out of the cube first."
 )
@@ -60,13 +71,23 @@ def verb(
     reference: str | None,
     reference_amount: float | None,
     scale_error: float,
+    strong_line_ppm: float | None,
     field_shift: bool,
     maps: Path | None,
     figures: Path | None,
 ) -> None:
     """Fit every voxel of CUBE with the species of the RECORD it came from."""
     held, measured = Cube.load(cube), Record.open(record)
-    patterns = patterns_of(measured.specimen.species, measured.instrument, held)
+    species: Sequence[Species] = measured.specimen.species
+    before = len(held.account.remarks)
+    if strong_line_ppm is not None:
+        removal = LineRemoval(strong_line_ppm)
+        species = weak_species(species, measured.instrument, held, removal)
+        with progress_line() as line:
+            weak = patterns_of(species, measured.instrument, held)
+            counted = line.counted("taking out the strong line")
+            held = removal.remove(held, weak, progress=counted).cube
+    patterns = patterns_of(species, measured.instrument, held)
     moved = ShiftEstimate(shift_bound).estimate(held, patterns) if field_shift else None
     if moved is not None:
         held = moved.corrected(held)
@@ -94,11 +115,23 @@ def verb(
     result.save(output)
     click.echo(f"{output}: {len(fitted.names)} species")
     click.echo(table(fitted))
-    for remark in (*held.account.remarks[-1:], *remarks) if moved is not None else remarks:
+    for remark in (*held.account.remarks[before:], *remarks):
         click.echo(f"note: {remark}")
     if figures is not None:
         for path in draw(result, moved, figures):
             click.echo(f"    {path}")
+
+
+def weak_species(
+    species: Sequence[Species], instrument: Instrument, cube: Cube, removal: LineRemoval
+) -> list[Species]:
+    """Those whose lines are not what is removed."""
+    reference, frequency = cube.reference_shift_ppm, cube.larmor_frequency
+    return [
+        one
+        for one in species
+        if not removal.covers(species_lines(one, instrument, reference), reference, frequency)
+    ]
 
 
 def amounts_of(cube: Cube, fitted: Fitted, remarks: tuple[str, ...]) -> SpeciesMaps:

@@ -9,6 +9,7 @@ from recon.quantify.limits import Limits, labels, limits
 from recon.quantify.nuisance import Nuisance
 from recon.quantify.patterns import Baseline, Pattern, patterns_of
 from recon.quantify.scale import CalibratedResponse, ReferenceSpecies
+from recon.quantify.water import LineRemoval, Removed
 
 __all__ = [
     "Agreement",
@@ -18,10 +19,12 @@ __all__ = [
     "Fit",
     "Fitted",
     "Limits",
+    "LineRemoval",
     "Nuisance",
     "Pattern",
     "ReferenceSpecies",
     "Refusal",
+    "Removed",
     "ShiftEstimate",
     "compare",
     "labels",
