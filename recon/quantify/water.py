@@ -148,6 +148,14 @@ class LineRemoval:
             for done, _ in enumerate(pool.map(work, starts)):
                 if progress is not None:
                     progress(done + 1, len(starts))
+        ratio = float(np.median(np.abs(amplitude) / np.maximum(np.abs(left[:, 0]), 1e-30)))
+        if ratio < DOMINANT:
+            warnings.warn(
+                f"no line near {self.centre_ppm:g} ppm is much stronger than the others "
+                f"({ratio:.2g} times what is left); what was removed may be one of them",
+                InputWarning,
+                stacklevel=2,
+            )
         remark = (
             f"a strong line at {self.centre_ppm:g} ppm was taken out ({self.poles} exponentials)"
         )
