@@ -32,7 +32,7 @@ FloatArray = NDArray[np.floating]
 CHUNK = 128
 STRONG = 0.01
 """Share of the strongest pole's amplitude from which a pole is part of the line."""
-DOMINANT = 5.0
+DOMINANT = 15.0
 """How much stronger than the rest a line must be for its removal to be safe."""
 FARTHEST = 10.0
 """Largest change of a rate in one step, 1/s."""
@@ -113,24 +113,16 @@ class LineRemoval:
             Samples are not evenly spaced or too few.
         """
         dwell, count = cube.dwell, len(cube.values)
-        taps, step = self._filter(dwell, count)
-        kept = min((count - len(taps)) // step + 1, LONGEST)
-        if kept < 2 * self.poles + 2:
-            raise InputError(
-                f"{count} samples are too few for {self.poles} poles", "line removal", "use fewer"
-            )
+        decimate, step = self._decimation(dwell, count)
         offset = (self.centre_ppm - cube.reference_shift_ppm) * 1e-6 * cube.larmor_frequency
         carrier = np.exp(2j * np.pi * offset * np.asarray(cube.sample_times))
-        decimate = np.zeros((count, kept))
-        for place in range(kept):
-            decimate[place * step : place * step + len(taps), place] = taps
         courses = [pattern.courses for pattern in others]
         known = np.concatenate(courses, axis=1) if courses else np.zeros((count, 0), complex)
         known = carrier[:, None] * known / max(float(np.abs(known).max(initial=0)), 1e-300)
         signal = np.ascontiguousarray(cube.values.reshape(count, -1).T)
         left = np.empty_like(signal)
         amplitude = np.empty(len(signal), np.complex64)
-        shift = np.empty(len(signal), np.float32)
+        shift, lead = (np.empty(len(signal), np.float32) for _ in range(2))
         times = np.asarray(cube.sample_times, float)
         starts = range(0, len(signal), CHUNK)
 
@@ -138,7 +130,7 @@ class LineRemoval:
             part = slice(first, first + CHUNK)
             turned = signal[part].astype(complex) * carrier
             rates = self._rates(turned @ decimate, step * dwell)
-            shift[part], rates = self._strong(turned, rates, times)
+            shift[part], lead[part], rates = self._strong(turned, rates, times)
             moved = -2j * np.pi * shift[part].astype(float)
             line, at_zero = _fitted_line(turned, rates, known, moved, times, self.refinements)
             left[part] = (turned - line) * carrier.conj()
@@ -148,14 +140,7 @@ class LineRemoval:
             for done, _ in enumerate(pool.map(work, starts)):
                 if progress is not None:
                     progress(done + 1, len(starts))
-        ratio = float(np.median(np.abs(amplitude) / np.maximum(np.abs(left[:, 0]), 1e-30)))
-        if ratio < DOMINANT:
-            warnings.warn(
-                f"no line near {self.centre_ppm:g} ppm is much stronger than the others "
-                f"({ratio:.2g} times what is left); what was removed may be one of them",
-                InputWarning,
-                stacklevel=2,
-            )
+        self._warn_if_weak(float(np.median(lead)))
         remark = (
             f"a strong line at {self.centre_ppm:g} ppm was taken out ({self.poles} exponentials)"
         )
@@ -168,12 +153,22 @@ class LineRemoval:
             shift.reshape(shape),
         )
 
-    def _filter(self, dwell: float, count: int) -> tuple[FloatArray, int]:
-        """Taps of the low pass and the decimation it allows."""
+    def _decimation(self, dwell: float, count: int) -> tuple[FloatArray, int]:
+        """Low pass and decimation as one matrix (times, kept), and the step between kept times."""
         step = int(min(1 / dwell / (3 * self.search_Hz), count / (6 * self.poles)))
-        if step < 2:
-            return np.ones(1), 1
-        return firwin(4 * step + 1, 1.5 * self.search_Hz, fs=1 / dwell), step
+        taps = np.ones(1)
+        if step >= 2:
+            taps = firwin(4 * step + 1, 1.5 * self.search_Hz, fs=1 / dwell)
+        step = max(step, 1)
+        kept = min((count - len(taps)) // step + 1, LONGEST)
+        if kept < 2 * self.poles + 2:
+            raise InputError(
+                f"{count} samples are too few for {self.poles} poles", "line removal", "use fewer"
+            )
+        matrix = np.zeros((count, kept))
+        for place in range(kept):
+            matrix[place * step : place * step + len(taps), place] = taps
+        return matrix, step
 
     def _rates(self, decimated: ComplexArray, dwell: float) -> ComplexArray:
         """Complex rates of the poles within the searched band, (V, poles); NaN beyond it."""
@@ -193,14 +188,27 @@ class LineRemoval:
 
     def _strong(
         self, turned: ComplexArray, rates: ComplexArray, times: FloatArray
-    ) -> tuple[FloatArray, ComplexArray]:
-        """Shift of the strongest pole, Hz, and the rates of the line; NaN for other poles."""
+    ) -> tuple[FloatArray, FloatArray, ComplexArray]:
+        """Shift of the strongest pole, Hz, how much stronger it is than poles that are not of the
+        line, and the rates of the line; NaN for other poles.
+        """
         size = np.abs(_solved(_waves(rates, times), turned))
         best = size.argmax(axis=1)[:, None]
         middle = np.nan_to_num(np.take_along_axis(rates, best, 1).imag)
         near = np.abs(rates.imag - middle) <= 2 * np.pi * self.half_width_Hz
         strong = size > STRONG * np.take_along_axis(size, best, 1)
-        return -middle[:, 0] / (2 * np.pi), np.where(near & strong, rates, np.nan)
+        second = np.where(near, 0, size).max(axis=1)
+        lead = size.max(axis=1) / np.maximum(second, 1e-30)
+        return -middle[:, 0] / (2 * np.pi), lead, np.where(near & strong, rates, np.nan)
+
+    def _warn_if_weak(self, lead: float) -> None:
+        if lead < DOMINANT:
+            warnings.warn(
+                f"no line near {self.centre_ppm:g} ppm is much stronger than its neighbours "
+                f"({lead:.2g} times); what was removed may be one of them",
+                InputWarning,
+                stacklevel=3,
+            )
 
 
 def _waves(rates: ComplexArray, times: FloatArray) -> ComplexArray:
