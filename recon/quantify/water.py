@@ -32,7 +32,7 @@ FloatArray = NDArray[np.floating]
 CHUNK = 128
 STRONG = 0.01
 """Share of the strongest pole's amplitude from which a pole is part of the line."""
-DOMINANT = 15.0
+DOMINANT = 40.0
 """How much stronger than the rest a line must be for its removal to be safe."""
 FARTHEST = 10.0
 """Largest change of a rate in one step, 1/s."""
