@@ -43,7 +43,7 @@ def voxel_figure(
         amount = float(fitted.amounts[place][voxel])
         error = float(fitted.standard_error[place][voxel])
         course = pattern.courses.mean(axis=1) * amount * turn
-        name = f"{pattern.name} {amount:.3g} ± {error:.2g} mM"
+        name = f"{pattern.name} {_plain(amount, 3)} ± {_plain(error, 2)} mM"
         parts[name] = (matrix @ course).real * 1e3
     return figures.fitted_spectrum(
         axis,
@@ -56,6 +56,11 @@ def voxel_figure(
         grid=cube.grid,
         voxel=voxel,
     )
+
+
+def _plain(value: float, digits: int) -> str:
+    """A number without an exponent, rounded to so many digits."""
+    return f"{float(f'{value:.{digits}g}'):,.10g}"
 
 
 def spectral_error(cube: Cube, matrix: ComplexArray, voxel: tuple[int, int, int]) -> FloatArray:
