@@ -27,6 +27,7 @@ ComplexArray = NDArray[np.complexfloating]
 FloatArray = NDArray[np.floating]
 CHUNK = 256
 HALVINGS = 3
+TINY = 1e-9
 ENOUGH = 0.05
 """Step, r.m.s. in standard errors, that ends the fit."""
 BLANKS = 64
@@ -39,6 +40,7 @@ class _Chunk:
 
     where: slice
     products: Products
+    settled: bool = False
 
 
 class GaussNewton:
@@ -67,7 +69,7 @@ class GaussNewton:
         self.members = np.zeros((len(patterns), sum(parts)))
         self.members[np.repeat(np.arange(len(patterns)), parts), np.arange(sum(parts))] = 1
         voxels = len(self.signal)
-        self.energy = np.empty(voxels)
+        self.energy, self.left = np.empty(voxels), np.empty(voxels)
         self.linear = np.zeros((voxels, sum(parts) + 2 * self.broad.shape[1]))
         self.nuisance = np.zeros((voxels, 3), np.float32)
         self.nuisance_error = np.zeros((voxels, 3), np.float32)
@@ -105,7 +107,7 @@ class GaussNewton:
             signal = self.signal[where]
             self.energy[where] = (signal.real.astype(float) ** 2 + signal.imag**2).sum(axis=1)
             products = self.moments.products(signal, self.energy[where], self.nuisance[where])
-            self.linear[where], _ = _projected(products)
+            self.linear[where], self.left[where] = _projected(products)
             return _Chunk(where, products)
 
         self.chunks = list(self._pool.map(begin, parts))
@@ -145,6 +147,8 @@ class GaussNewton:
 
     def _step(self, chunk: _Chunk, centres: FloatArray) -> None:
         """One step of the nuisances, halved where χ² with the ties would rise."""
+        if chunk.settled:
+            return
         where, products = chunk.where, chunk.products
         centres = centres[where]
         nuisance, linear = self.nuisance[where], self.linear[where]
@@ -155,7 +159,7 @@ class GaussNewton:
             if np.isfinite(tie):
                 gradient[:, first + place] += (centres[:, which] - nuisance[:, which]) / tie**2
         step = np.einsum("vij,vj->vi", inverse, gradient)[:, first:]
-        before = self._cost(products, linear, nuisance, centres, where)
+        before = self._cost(self.left[where], nuisance, centres, where)
         pending = np.arange(len(linear))
         old = nuisance.copy()
         for share in 0.5 ** np.arange(HALVINGS + 1):
@@ -166,18 +170,20 @@ class GaussNewton:
                 new[:, which] = np.clip(moved, low, self.rules[which].bound)
             rows = np.arange(where.start, where.start + len(old))[pending]
             trial = self.moments.products(self.signal[rows], self.energy[rows], new)
-            amounts, _ = _projected(trial)
-            cost = self._cost(trial, amounts, new, centres[pending], rows)
+            amounts, left = _projected(trial)
+            cost = self._cost(left, new, centres[pending], rows)
             good = cost <= before[pending] * (1 + 1e-6) + 1e-3
             taken = pending[good]
             nuisance[taken], linear[taken] = new[good], amounts[good]
-            products.put(taken, _picked(trial, good))
+            products.put(taken, trial if good.all() else _picked(trial, good))
+            self.left[where.start + taken] = left[good]
             pending = pending[~good]
             if not pending.size:
                 break
         variance = np.einsum("vii->vi", inverse)[:, first:]
         moved = (nuisance - old)[:, self.free]
         self._moved[where] = np.sqrt((moved**2 / np.maximum(variance, 1e-30)).max(axis=1))
+        chunk.settled = bool(self._moved[where].max() < ENOUGH / 2)
 
     def _inverse(
         self, products: Products, linear: FloatArray, where: slice | NDArray[np.integer]
@@ -195,13 +201,13 @@ class GaussNewton:
 
     def _cost(
         self,
-        products: Products,
-        linear: FloatArray,
+        left: FloatArray,
         nuisance: FloatArray,
         centres: FloatArray,
         where: slice | NDArray[np.integer],
     ) -> FloatArray:
-        cost = 2 * _left(products, linear) / self.sigma[where].astype(float) ** 2
+        """χ² from Σ|residual|², in its own units, with the ties."""
+        cost = 2 * left / self.sigma[where].astype(float) ** 2
         for which in self.free:
             tie = self.rules[which].tie
             if np.isfinite(tie):
@@ -306,30 +312,27 @@ def _orthonormal(courses: ComplexArray, real: bool) -> ComplexArray:
 
 
 def _projected(products: Products) -> tuple[FloatArray, FloatArray]:
-    """Best amounts and baseline (V, n), and the normal matrix."""
+    """Best amounts and baseline (V, n), and Σ|y − model|² at them."""
     normal, right = products.linear_system()
-    return np.einsum("vij,vj->vi", _inverted(normal), right), normal
+    size = np.sqrt(np.maximum(np.einsum("vii->vi", normal), 0))
+    size[size == 0] = 1
+    scaled = normal / (size[:, :, None] * size[:, None])
+    diagonal = np.arange(size.shape[1])
+    scaled[:, diagonal, diagonal] += TINY
+    found = np.linalg.solve(scaled, (right / size)[..., None])[..., 0] / size
+    inside = np.matmul(normal, found[..., None])[..., 0]
+    return found, products.energy - ((2 * right - inside) * found).sum(axis=1)
 
 
 def _inverted(normal: FloatArray) -> FloatArray:
-    """Inverse after scaling to a unit diagonal, kept from breaking by 1e-9 of it."""
+    """Inverse after scaling to a unit diagonal, kept from breaking by `TINY` of it."""
     size = np.sqrt(np.maximum(np.einsum("vii->vi", normal), 0))
     size[size == 0] = 1
     scale = 1 / (size[:, :, None] * size[:, None])
     scaled = normal * scale
     diagonal = np.arange(size.shape[1])
-    scaled[:, diagonal, diagonal] += 1e-9
+    scaled[:, diagonal, diagonal] += TINY
     return np.linalg.inv(scaled) * scale
-
-
-def _left(products: Products, linear: FloatArray) -> FloatArray:
-    """Σ|y − model|², (V,)."""
-    normal, right = products.linear_system()
-    return np.asarray(
-        products.energy
-        - 2 * (right * linear).sum(axis=1)
-        + np.einsum("vi,vij,vj->v", linear, normal, linear)
-    )
 
 
 def _picked(products: Products, good: NDArray[np.bool_]) -> Products:

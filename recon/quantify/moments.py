@@ -187,7 +187,7 @@ class Moments:
 
     def products(self, signal: ComplexArray, energy: FloatArray, nuisance: FloatArray) -> Products:
         """Everything at the nuisances (V, 3) of signals (V, T)."""
-        conjugate = self.factor(nuisance).conj()
+        conjugate = self.factor(nuisance * np.array([-1, 1, -1], nuisance.dtype))
         data = (conjugate * signal) @ self._probe
         mixed = conjugate @ self._mixed
         return Products(

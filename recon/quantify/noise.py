@@ -74,12 +74,20 @@ def rank_of(cube: Cube) -> int:
     """
     count = len(cube.values)
     courses = cube.values.reshape(count, -1)
+    some = courses[:, :: max(1, courses.shape[1] // (4 * SKETCH))]
+    rank = _sketched(some)  # cannot be more than that of all
+    return rank if rank == count else _sketched(courses)
+
+
+def _sketched(courses: NDArray[np.complexfloating]) -> int:
+    """Rank seen in random mixtures; all of them from `SKETCH` on."""
+    count, voxels = courses.shape
     width = min(count, SKETCH)
     random = np.random.default_rng(0)
     mixed = np.zeros((count, width), complex)
-    for first in range(0, courses.shape[1], BATCH):
+    for first in range(0, voxels, BATCH):
         part = courses[:, first : first + BATCH].astype(complex)
         mixed += part @ random.standard_normal((part.shape[1], width))
-    values = np.linalg.svd(mixed, compute_uv=False)
-    rank = int((values > ROUNDING * values[0]).sum())
+    values = np.linalg.eigvalsh(mixed.conj().T @ mixed)
+    rank = int((values > ROUNDING**2 * values[-1]).sum())
     return max(1, rank) if rank < width else count
