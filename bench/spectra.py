@@ -14,6 +14,7 @@ import os
 os.environ.setdefault("OMP_NUM_THREADS", "1")
 
 import time
+from dataclasses import replace
 
 import numpy as np
 from common import emit, table, timed
@@ -22,7 +23,7 @@ from recon.basis import magnetisation_per_mM, time_course
 from recon.demo import instrument
 from recon.grid import Grid
 from recon.physics.spins import SpinSystem, line_list, time_signal
-from recon.quantify import Fit, Nuisance, patterns_of
+from recon.quantify import Fit, LineRemoval, Nuisance, ShiftEstimate, patterns_of
 from recon.quantify.patterns import worst_pair
 from recon.result import Account, Cube
 from recon.species_table import species_named
@@ -103,7 +104,7 @@ def eight_species() -> tuple[float, float, float]:
     cube = cube_of(kinds, apparatus, amounts, times, 30, shift, 3.0)
     patterns = patterns_of(kinds, apparatus, cube)
     best = np.inf
-    for _ in range(3):
+    for _ in range(5):
         begin = time.perf_counter()
         fitted = Fit().fit(cube, patterns)
         best = min(best, time.perf_counter() - begin)
@@ -130,30 +131,70 @@ def lactate_under_lipid(field_mT, t2_star_ms, snr, held=True) -> tuple[float, fl
     return bias, error, worst_pair(patterns)[2]
 
 
+def separation_table() -> None:
+    """Where lactate is told from lipid CH2: field × line width × noise."""
+    noises = (5.0, 20.0, 80.0)
+    rows = []
+    for field in (50.0, 75.0, 100.0, 150.0, 200.0, 350.0, 500.0):
+        for t2 in (30.0, 75.0, 150.0):
+            row = [field, 1e3 / (np.pi * t2)]
+            for snr in noises:
+                bias, error, condition = lactate_under_lipid(field, t2, snr)
+                verdict = "holds" if error < 10 and abs(bias) < 5 else "fails"
+                row += [f"{bias:+.1f} ± {error:.1f} {verdict}"]
+            rows.append([*row[:2], condition, *row[2:]])
+    print("lactate at 20 mM under five times as many lipid CH2 protons per lactate CH3 proton;")
+    print("bias ± standard error per voxel in % of lactate, by the snr of the first sample")
+    table(rows, ["field mT", "width Hz", "condition", *(f"snr {snr:g}" for snr in noises)])
+
+
+def weak_under_water() -> tuple[float, float]:
+    """Largest bias in % of lactate and creatine beside 1000 times as much water: with and without
+    the removal of its line, which is wider than the list says and shifted from voxel to voxel.
+    """
+    apparatus, times = instrument(), np.arange(256) * 2e-3
+    kinds = tuple(species(name) for name in ("lactate", "creatine"))
+    shape = (2, 16, 16)
+    amounts = np.random.default_rng(1).uniform(5, 30, (2, *shape))
+    y, x = np.mgrid[-1:1:16j, -1:1:16j]
+    shift = (8 * x + 3 * y)[None] * np.ones((2, 1, 1))
+    weak = cube_of(kinds, apparatus, amounts, times, 20, shift)
+    patterns = patterns_of(kinds, apparatus, weak)
+    t, width = times[:, None, None, None], 1 / 35e-3
+    size = 1000 * 17 * np.abs(patterns[1].courses[0]).max()
+    water = size * np.exp(-2j * np.pi * shift * t - width * t)
+    cube = replace(weak, values=(weak.values + water).astype(np.complex64))
+    removed = LineRemoval().remove(cube, patterns).cube
+    with_water = [*patterns, *patterns_of((species("water"),), apparatus, cube)]
+    fits = (Fit().fit(removed, patterns), Fit().fit(cube, with_water))
+    bias = [np.abs((fit.amounts[:2] - amounts).mean(axis=(1, 2, 3))) for fit in fits]
+    with_removal, without = (100 * float((b / amounts.mean(axis=(1, 2, 3))).max()) for b in bias)
+    return with_removal, without
+
+
+def shift_map() -> tuple[float, float]:
+    """Residual of a static shift from -30 to 30 Hz, r.m.s. in Hz, and its stated error."""
+    apparatus, times = instrument(), np.arange(256) * 2e-3
+    kinds = tuple(species(name) for name in NAMES)
+    amounts = np.random.default_rng(1).uniform(5, 30, (8, 2, 24, 24))
+    y, x = np.mgrid[-1:1:24j, -1:1:24j]
+    shift = (24 * x + 6 * x * y)[None] * np.ones((2, 1, 1))
+    cube = cube_of(kinds, apparatus, amounts, times, 15, shift)
+    found = ShiftEstimate().estimate(cube, patterns_of(kinds, apparatus, cube))
+    off = np.sqrt(((found.shift_Hz - shift) ** 2).mean())
+    return float(off), float(np.sqrt((found.standard_error_Hz**2).mean()))
+
+
 def main() -> None:
     seconds = ten_spins()
     speed, ratio, coverage = eight_species()
-    rows = []
-    for field in (50.0, 100.0, 200.0, 500.0):
-        for t2 in (50.0, 150.0):
-            for snr in (10.0, 50.0):
-                bias, error, condition = lactate_under_lipid(field, t2, snr)
-                verdict = "holds" if error < 10 and abs(bias) < 5 else "fails"
-                rows.append([field, 1e3 / (np.pi * t2), snr, condition, bias, error, verdict])
-    print("lactate at 20 mM under five times as many lipid CH2 protons per lactate CH3 proton")
-    table(
-        rows,
-        [
-            "field mT",
-            "line width Hz",
-            "snr",
-            "condition",
-            "bias %",
-            "s.e. % per voxel",
-            "separation",
-        ],
-    )
+    separation_table()
     bias, _, _ = lactate_under_lipid(100.0, 150.0, 50.0, held=False)
+    with_removal, without = weak_under_water()
+    residual, stated = shift_map()
+    print(f"water 1000 : 1, largest bias: {with_removal:.2g} % with its line taken out, ", end="")
+    print(f"{without:.3g} % with water as one species more")
+    print(f"static shift of -30 to 30 Hz: {residual:.2g} Hz left, stated {stated:.2g} Hz")
     emit(
         {
             "ten_spin_seconds": seconds,
@@ -161,6 +202,9 @@ def main() -> None:
             "crb_ratio": ratio,
             "coverage95": coverage,
             "lactate_bias_percent": abs(bias),
+            "water_bias_percent": with_removal,
+            "water_bias_percent_without_removal": without,
+            "field_shift_residual_hz": residual,
         }
     )
 

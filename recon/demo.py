@@ -17,6 +17,7 @@ from numpy.typing import NDArray
 
 from recon import figures
 from recon.basis import species_basis
+from recon.demo_overlap import Overlap
 from recon.handover.dataset import Delivery
 from recon.instrument import Instrument
 from recon.planning.tables import VariableDensity, lateral_factor
@@ -127,6 +128,9 @@ class Demo:
         cube.save(self.folder / "cube.h5")
         yield done("reconstructed the complex cube", self.folder / "cube.h5")
         yield done("drew figures", *self.draw(specimen, table, maps, ridge, cube))
+        overlap = Overlap(self.folder, apparatus, self.seed, self.progress).run()
+        yield done("told lactate from lipid at one place in the spectrum", *overlap.files)
+        yield from overlap.lines
         files = self.hand_over(maps, cube)
         page = self.report(specimen, apparatus, table, maps, cube)
         yield done(f"handed over {len(files)} files and a page", page)

@@ -16,6 +16,7 @@ from numpy.typing import NDArray
 
 from recon.errors import InputError
 from recon.grid import Grid
+from recon.labels import Labels
 from recon.specimen import GridDescription
 from recon.store import open_store, read_dataset, read_text, store_kind, write_store
 
@@ -100,12 +101,15 @@ class Result:
 
 @dataclass(frozen=True, eq=False)
 class SpeciesMaps(Result):
-    """Amounts in mM, float32 (species, nz, ny, nx), and the species' names."""
+    """Amounts in mM, float32 (species, nz, ny, nx), the species' names, and labels if any."""
 
     names: tuple[str, ...] = ()
+    labels: Labels | None = None
 
     def __post_init__(self) -> None:
         super().__post_init__()
+        if self.labels is not None and self.labels.values.shape != self.values.shape:
+            raise InputError(f"labels of shape {self.labels.values.shape}", "result")
         if len(self.names) != len(self.values):
             raise InputError(f"{len(self.values)} maps for {len(self.names)} names", "result")
 
@@ -118,12 +122,18 @@ class SpeciesMaps(Result):
 
     def save(self, path: Path | str) -> None:
         """Write the maps as one HDF5 file."""
-        _save(path, self, MAPS, {"names": list(self.names)})
+        extra: dict[str, Any] = {"names": list(self.names)}
+        if self.labels is not None:
+            extra["label_meaning"] = {str(key): text for key, text in self.labels.meaning.items()}
+        _save(path, self, MAPS, extra)
 
     @classmethod
     def load(cls, path: Path | str) -> SpeciesMaps:
         """Read what `save` wrote."""
         parts, extra = _load(path, MAPS)
+        if "labels" in parts:
+            meaning = {int(key): text for key, text in extra["label_meaning"].items()}
+            parts["labels"] = Labels(parts["labels"], meaning)
         return cls(**parts, names=tuple(extra["names"]))
 
 
@@ -216,6 +226,8 @@ def _save(path: Path | str, result: Result, kind: str, extra: Mapping[str, Any])
         for name in ("standard_error", "resolution"):
             if getattr(result, name) is not None:
                 file.create_dataset(name, data=getattr(result, name))
+        if isinstance(result, SpeciesMaps) and result.labels is not None:
+            file.create_dataset("labels", data=result.labels.values, compression="gzip")
         file.create_dataset("grid", data=GridDescription.of(result.grid).to_json())
         file.create_dataset("account", data=result.account.to_json())
         file.create_dataset("extra", data=json.dumps(extra))
@@ -229,7 +241,7 @@ def _load(path: Path | str, kind: str) -> tuple[dict[str, Any], dict[str, Any]]:
             "values": read_dataset(file, "values", where)[()],
             "account": Account.from_json(read_text(file, "account", where)),
         }
-        for name in ("standard_error", "resolution"):
+        for name in ("standard_error", "resolution", "labels"):
             if name in file:
                 parts[name] = read_dataset(file, name, where)[()]
         return parts, json.loads(read_text(file, "extra", where))

@@ -118,7 +118,6 @@ def test_nonlinear_fit_against_scipy(amounts):
         decay_per_s=Nuisance(60.0),
         phase_rad=Nuisance(1.0),
         iterations=30,
-        tolerance=0.0,
     )
     parts = patterns(cube)
     fitted = free.fit(cube, parts)

@@ -2,22 +2,36 @@
 
 from __future__ import annotations
 
+from collections.abc import Sequence
 from pathlib import Path
 
 import click
 import numpy as np
 
+from recon import figures as figures_of
+from recon.basis import species_lines
 from recon.cli.common import progress_line
+from recon.instrument import Instrument
 from recon.quantify import (
     Baseline,
     CalibratedResponse,
+    FieldShift,
     Fit,
+    Fitted,
+    LineRemoval,
     Nuisance,
     ReferenceSpecies,
+    ShiftEstimate,
+    compare,
+    labels,
+    limits,
     patterns_of,
+    refused,
 )
+from recon.quantify.agreement import in_words
 from recon.record import Record
 from recon.result import Account, Cube, SpeciesMaps
+from recon.specimen import Species
 
 
 @click.command("quantify")
@@ -30,6 +44,21 @@ from recon.result import Account, Cube, SpeciesMaps
 @click.option("--baseline-ms", type=float, multiple=True, help="Decay of a broad baseline.")
 @click.option("--reference", default=None, help="Species of known amount that sets the scale.")
 @click.option("--reference-mM", "reference_amount", type=float, default=None)
+@click.option(
+    "--strong-line-ppm",
+    type=float,
+    default=None,
+    help="Take this line, such as water's, out of every voxel first.",
+)
+@click.option(
+    "--field-shift", is_flag=True, help="Take a smooth static field shift out of the cube first."
+)
+@click.option(
+    "--maps", type=click.Path(path_type=Path), default=None, help="Direct amounts to compare with."
+)
+@click.option(
+    "--figures", type=click.Path(path_type=Path), default=None, help="Folder to draw into."
+)
 @click.option("--scale-error", type=float, default=0.0, help="Relative error of the scale.")
 def verb(
     cube: Path,
@@ -42,10 +71,26 @@ def verb(
     reference: str | None,
     reference_amount: float | None,
     scale_error: float,
+    strong_line_ppm: float | None,
+    field_shift: bool,
+    maps: Path | None,
+    figures: Path | None,
 ) -> None:
     """Fit every voxel of CUBE with the species of the RECORD it came from."""
     held, measured = Cube.load(cube), Record.open(record)
-    patterns = patterns_of(measured.specimen.species, measured.instrument, held)
+    species: Sequence[Species] = measured.specimen.species
+    before = len(held.account.remarks)
+    if strong_line_ppm is not None:
+        removal = LineRemoval(strong_line_ppm)
+        species = weak_species(species, measured.instrument, held, removal)
+        with progress_line() as line:
+            weak = patterns_of(species, measured.instrument, held)
+            counted = line.counted("taking out the strong line")
+            held = removal.remove(held, weak, progress=counted).cube
+    patterns = patterns_of(species, measured.instrument, held)
+    moved = ShiftEstimate(shift_bound).estimate(held, patterns) if field_shift else None
+    if moved is not None:
+        held = moved.corrected(held)
     settings = Fit(
         shift_Hz=Nuisance(shift_bound, 3.0),
         decay_per_s=Nuisance(np.pi * width_bound, 5.0),
@@ -56,35 +101,90 @@ def verb(
         raise click.UsageError("give --reference and --reference-mM together")
     with progress_line() as line:
         fitted = settings.fit(held, patterns, progress=line.counted("fitting spectra"))
+    scale: CalibratedResponse | ReferenceSpecies = CalibratedResponse(scale_error)
     if reference is not None and reference_amount is not None:
         scale = ReferenceSpecies(reference, reference_amount, scale_error)
-        values, error = scale.apply(fitted.names, fitted.amounts, fitted.standard_error)
+    fitted = scale.on(fitted)
+    if maps is not None:
+        remarks = compare(SpeciesMaps.load(maps), fitted, held, patterns).remarks()
     else:
-        known = CalibratedResponse(scale_error)
-        values, error = known.apply(fitted.names, fitted.amounts, fitted.standard_error)
-    failed = fitted.failed_assumption()
-    remarks = (f"assumption refused by the data: {failed}",) if failed else ()
-    SpeciesMaps(
-        grid=held.grid,
-        values=values.astype(np.float32),
-        standard_error=error.astype(np.float32),
+        found = refused(held, patterns)
+        told = in_words(found) if found else fitted.failed_assumption()
+        remarks = (f"assumption refused by the data: {told}",) if told else ()
+    result = amounts_of(held, fitted, remarks)
+    result.save(output)
+    click.echo(f"{output}: {len(fitted.names)} species")
+    click.echo(table(fitted))
+    for remark in (*held.account.remarks[before:], *remarks):
+        click.echo(f"note: {remark}")
+    if figures is not None:
+        for path in draw(result, moved, figures):
+            click.echo(f"    {path}")
+
+
+def weak_species(
+    species: Sequence[Species], instrument: Instrument, cube: Cube, removal: LineRemoval
+) -> list[Species]:
+    """Those whose lines are not what is removed."""
+    reference, frequency = cube.reference_shift_ppm, cube.larmor_frequency
+    return [
+        one
+        for one in species
+        if not removal.covers(species_lines(one, instrument, reference), reference, frequency)
+    ]
+
+
+def amounts_of(cube: Cube, fitted: Fitted, remarks: tuple[str, ...]) -> SpeciesMaps:
+    """The fit as maps with labels; the limits stand in the account's provenance."""
+    account = cube.account
+    return SpeciesMaps(
+        grid=cube.grid,
+        values=fitted.amounts,
+        standard_error=fitted.standard_error,
         account=Account(
-            prior=f"{held.account.prior}; then a fit of known lines in every voxel",
-            weights=held.account.weights,
-            why_stopped=held.account.why_stopped,
+            prior=f"{account.prior}; then a fit of known lines in every voxel",
+            weights=account.weights,
+            why_stopped=account.why_stopped,
             misfit=float(np.median(fitted.chi_squared)),
-            provenance=held.account.provenance,
-            remarks=(*held.account.remarks, *remarks),
+            provenance={**account.provenance, "limits": limits(fitted).facts()},
+            remarks=(*account.remarks, *remarks),
         ),
         names=fitted.names,
-    ).save(output)
-    click.echo(f"{output}: {len(fitted.names)} species")
-    heads = ("mean", "error", "detection", "quantify")
-    click.echo(f"{'lowest, mM':<14}" + "".join(f"{head:>12}" for head in heads))
+        labels=labels(fitted),
+    )
+
+
+def table(fitted: Fitted) -> str:
+    """Mean, error and limits of every species at every depth, and the share worth reading."""
+    reach, readable = limits(fitted), labels(fitted).readable
+    heads = ("plane", "mean", "error", "detection", "quantify", "readable")
+    lines = [f"{'mM':<14}" + "".join(f"{head:>11}" for head in heads)]
     for place, name in enumerate(fitted.names):
-        typical = float(np.sqrt((error[place, 0].astype(float) ** 2).mean()))
-        mean = float(values[place, 0].mean())
-        numbers = (mean, typical, 3.3 * typical, 10 * typical)
-        click.echo(f"{name:<14}" + "".join(f"{number:>12.4g}" for number in numbers))
-    for remark in remarks:
-        click.echo(f"note: {remark}")
+        for level, values in enumerate(fitted.amounts[place]):
+            spread = fitted.standard_error[place, level]
+            spread = spread[np.isfinite(spread)]
+            error = float(np.sqrt((spread.astype(float) ** 2).mean())) if spread.size else np.inf
+            low, high = reach.detection[place, level], reach.quantification[place, level]
+            numbers = (float(values.mean()), error, float(low), float(high))
+            share = f"{100 * readable[place, level].mean():.0f} %"
+            cells = [f"{level + 1:>11d}", *(f"{number:>11.4g}" for number in numbers)]
+            lines.append(f"{name if level == 0 else '':<14}" + "".join(cells) + f"{share:>11}")
+    lines.append("limits: 3 and 10 standard errors of the blank (IUPAC), one voxel, by plane")
+    return "\n".join(lines)
+
+
+def draw(result: SpeciesMaps, moved: FieldShift | None, folder: Path) -> list[Path]:
+    """Labels, every species' planes with their errors beside them, and the field shift, if any."""
+    assert result.labels is not None
+    assert result.standard_error is not None
+    picture = figures_of.label_maps(result.labels, result.names, result.grid)
+    written = [figures_of.save(picture, folder / "labels.png")]
+    for name, values, error in zip(result.names, result.values, result.standard_error, strict=True):
+        stack = figures_of.depth_stack(values, error, result.grid, quantity=name, unit="mM")
+        written.append(figures_of.save(stack, folder / f"{name}-planes.png"))
+    if moved is not None:
+        stack = figures_of.depth_stack(
+            moved.shift_Hz, moved.standard_error_Hz, moved.grid, quantity="field shift", unit="Hz"
+        )
+        written.append(figures_of.save(stack, folder / "field-shift.png"))
+    return written

@@ -68,7 +68,7 @@ def spectrum(
             _mark_lines(axes, lines)
         figure.legend(loc="outside lower center", ncols=min(4, len(drawn)))
         if grid is not None and voxel is not None:
-            axes.set_title(_place(grid, voxel), loc="left", pad=22 if lines else 6)
+            axes.set_title(voxel_title(grid, voxel), loc="left", pad=22 if lines else 6)
     return figure
 
 
@@ -113,7 +113,8 @@ def _mark_lines(axes: Axes, lines: Mapping[str, float]) -> None:
         )
 
 
-def _place(grid: Grid, voxel: tuple[int, int, int]) -> str:
+def voxel_title(grid: Grid, voxel: tuple[int, int, int]) -> str:
+    """Where a voxel (z, y, x) lies."""
     level, row, column = voxel
     height = style.micrometres(grid.heights[level])
     return (

@@ -3,12 +3,13 @@
 from __future__ import annotations
 
 from collections.abc import Sequence
-from dataclasses import dataclass
+from dataclasses import dataclass, replace
 
 import numpy as np
 from numpy.typing import NDArray
 
 from recon.errors import InputError
+from recon.quantify.fitted import Fitted
 
 FloatArray = NDArray[np.floating]
 
@@ -28,6 +29,11 @@ class CalibratedResponse:
     ) -> tuple[FloatArray, FloatArray]:
         """Amounts and standard errors (species, nz, ny, nx) with the scale's error carried."""
         return amounts, np.sqrt(error**2 + (amounts * self.relative_error) ** 2)
+
+    def on(self, fitted: Fitted) -> Fitted:
+        """The fit with the scale's error in its standard errors; a blank has none of it."""
+        amounts, error = self.apply(fitted.names, fitted.amounts, fitted.standard_error)
+        return replace(fitted, amounts=amounts, standard_error=error)
 
 
 @dataclass(frozen=True)
@@ -50,6 +56,21 @@ class ReferenceSpecies:
         self, names: Sequence[str], amounts: FloatArray, error: FloatArray
     ) -> tuple[FloatArray, FloatArray]:
         """Amounts and standard errors (species, nz, ny, nx), rescaled."""
+        factor, relative = self.factor(names, amounts, error)
+        scaled = amounts * factor
+        return scaled, np.sqrt((error * factor) ** 2 + (scaled * relative) ** 2)
+
+    def on(self, fitted: Fitted) -> Fitted:
+        """The fit rescaled, the scale's error in its standard errors."""
+        factor, _ = self.factor(fitted.names, fitted.amounts, fitted.standard_error)
+        amounts, error = self.apply(fitted.names, fitted.amounts, fitted.standard_error)
+        blank = fitted.blank_error * factor
+        return replace(fitted, amounts=amounts, standard_error=error, blank_error=blank)
+
+    def factor(
+        self, names: Sequence[str], amounts: FloatArray, error: FloatArray
+    ) -> tuple[np.float32, float]:
+        """What amounts are multiplied by, and its relative error."""
         if self.name not in names:
             raise InputError(f"'{self.name}' was not fitted", "reference species")
         place = list(names).index(self.name)
@@ -62,6 +83,4 @@ class ReferenceSpecies:
         weight = 1 / np.maximum(spread[good], 1e-30) ** 2
         mean = float((weight * found[good]).sum() / weight.sum())
         relative = np.hypot(self.relative_error, 1 / (mean * np.sqrt(weight.sum())))
-        factor = np.float32(self.amount_mM / mean)
-        scaled = amounts * factor
-        return scaled, np.sqrt((error * factor) ** 2 + (scaled * relative) ** 2)
+        return np.float32(self.amount_mM / mean), float(relative)

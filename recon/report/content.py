@@ -14,7 +14,7 @@ from recon.basis import species_basis
 from recon.errors import InputError
 from recon.figures import style
 from recon.grid import Grid
-from recon.handover.labels import MEANING, readability
+from recon.handover.labels import Labels
 from recon.instrument import Instrument
 from recon.protocol import Protocol
 from recon.result import Cube, SpeciesMaps
@@ -93,7 +93,9 @@ class Content:
             "truth": self.truth is not None,
             "amount_colours": _colours(style.AMOUNTS),
             "error_colours": _colours(style.ERRORS),
-            "label_meaning": {str(int(k)): text for k, text in MEANING.items()},
+            "label_meaning": {
+                str(int(k)): text for k, text in Labels.derived(self.maps).meaning.items()
+            },
             "believe": rows,
             "verdict": verdict(rows, self.maps.grid),
             "remarks": [*account.remarks],
@@ -116,7 +118,7 @@ class Content:
             "quantum": _packed(quantum),
             "spread": _packed(spread),
             "shapes": _packed(self.shapes()),
-            "labels": base64.b64encode(readability(self.maps).tobytes()).decode(),
+            "labels": base64.b64encode(Labels.derived(self.maps).values.tobytes()).decode(),
         }
         return packed | ({"truth": _packed(self.truth)} if self.truth is not None else {})
 
@@ -164,12 +166,12 @@ def believable(maps: SpeciesMaps, truth: FloatArray | None) -> list[dict[str, An
     `off`: whether the true error is more than `SUSPECT` times the standard error.
     """
     assert maps.standard_error is not None
-    labels = readability(maps)
+    labels = Labels.derived(maps)
     rows = []
     for place, name in enumerate(maps.names):
         spread = maps.standard_error[place].astype(float)
         error = np.sqrt((spread**2).mean(axis=(1, 2)))
-        readable = np.isin(labels[place], (1, 2)).mean(axis=(1, 2))
+        readable = labels.readable[place].mean(axis=(1, 2))
         row: dict[str, Any] = {
             "name": name,
             "error_mM": error.tolist(),

@@ -32,6 +32,7 @@ from recon.simulate.diffusing import diffusing_fields
 from recon.simulate.images import Progress, Samples, species_images
 from recon.simulate.noise import NoNoise, PhotonNoise, PoissonNoise
 from recon.simulate.scene import Scene
+from recon.simulate.shifted import shifted_fields
 from recon.specimen import Specimen
 from recon.spreading import Spreading
 
@@ -60,6 +61,9 @@ class SimulationOptions:
     spreading
         What diffusion does to wound patterns, `FreeDiffusion()` or `StandingMap()`; None for
         molecules that stand still. Every sample time is then a convolution of its own.
+    field_shift_Hz
+        Shift of all lines by a static field, (nz, ny, nx) on the specimen's grid, positive towards
+        higher ppm; None for none. Again a convolution per sample time.
     """
 
     lateral_refinement: int = 1
@@ -68,12 +72,17 @@ class SimulationOptions:
     photon_noise: PhotonNoise = field(default_factory=PoissonNoise)
     memory_limit_gib: float = 4.0
     spreading: Spreading | None = None
+    field_shift_Hz: NDArray[np.floating] | None = None  # noqa: N815
 
     def __post_init__(self) -> None:
         if min(self.lateral_refinement, self.axial_refinement) < 1:
             raise InputError("refinements must be at least 1", "simulation")
         if not 0 <= self.wavevector_jitter < np.inf:
             raise InputError("wavevector_jitter must not be negative", "simulation")
+        if self.spreading is not None and self.field_shift_Hz is not None:
+            raise InputError(
+                "a field shift with diffusion is not modelled", "simulation", "choose one"
+            )
 
 
 def simulate(
@@ -120,7 +129,7 @@ def simulate(
         seed,
     )
     _check_memory(scene, options, in_file=path is not None)
-    fields, strongest = _true_fields(scene, specimen, options.spreading, progress)
+    fields, strongest = _true_fields(scene, specimen, options, progress)
     if isinstance(options.photon_noise, PoissonNoise):
         _warn_if_not_linear(strongest, instrument.readout)
     description = specimen.description_json()
@@ -164,15 +173,18 @@ def true_fields(
 
 
 def _true_fields(
-    scene: Scene, specimen: Specimen, spreading: Spreading | None, progress: Progress | None
+    scene: Scene, specimen: Specimen, options: SimulationOptions, progress: Progress | None
 ) -> tuple[Iterator[Samples], float]:
     """Field (times, cy, cx) of one shot after the other, and the strongest there can be, T."""
     courses = _time_courses(specimen, scene.instrument, scene.protocol)
-    if spreading is None:
+    if options.field_shift_Hz is not None:
+        fields = shifted_fields(scene, courses, options.field_shift_Hz, progress)
+        return iter(fields), float(np.abs(fields).max())
+    if options.spreading is None:
         images = species_images(scene, progress)
         return _still(images, courses, scene.protocol), float(np.abs(images).sum(axis=1).max())
     diffusion = np.array([one.diffusion for one in specimen.species])
-    fields = diffusing_fields(scene, courses, diffusion, spreading, progress)
+    fields = diffusing_fields(scene, courses, diffusion, options.spreading, progress)
     return iter(fields), float(np.abs(fields).max())
 
 
@@ -231,7 +243,7 @@ def _check_memory(scene: Scene, options: SimulationOptions, *, in_file: bool) ->
     channels = int(np.prod(scene.instrument.detector.channels()))
     held = species + (0 if in_file else len(scene.protocol.sample_times))
     need = plane * (nodes + 12 + 5 * species) + 8 * shots * channels * held
-    if options.spreading is not None:
+    if options.spreading is not None or options.field_shift_Hz is not None:
         layers, times = len(scene.grid.heights), len(scene.protocol.sample_times)
         need += 3 * plane * layers * (1 + species) + 8 * shots * channels * times
     limit = options.memory_limit_gib * 2**30

@@ -2,7 +2,8 @@
 
 from __future__ import annotations
 
-from collections.abc import Callable
+from collections.abc import Callable, Sequence
+from typing import Any
 
 import numpy as np
 import scipy.fft
@@ -29,7 +30,7 @@ def species_images(scene: Scene, progress: Progress | None) -> Samples:
         layers = [(voxels.response(sheet, largest), held) for voxels, held in scene.layers()]
         waves, group = np.unique(scene.nuclear[members], axis=0, return_inverse=True)
         for number, wave in enumerate(waves):
-            field = _field(scene, layers, wave)
+            field = wound_field(scene, layers, wave)
             for shot in members[group.reshape(-1) == number]:
                 factor = np.complex64(scene.protocol.amplitude[shot])
                 images[shot] = detect(field, scene.sensor[shot]) * factor
@@ -39,12 +40,16 @@ def species_images(scene: Scene, progress: Progress | None) -> Samples:
     return images
 
 
-def _field(
-    scene: Scene, layers: list[tuple[VoxelResponse, NDArray[np.float32]]], wave: Wavevectors
+def wound_field(
+    scene: Scene, layers: Sequence[tuple[VoxelResponse, NDArray[Any]]], wave: Wavevectors
 ) -> Samples:
-    """Field along the sensing axis at the places, (species, places y, x), by convolution."""
+    """Field along the sensing axis at the places, (components, places y, x), by convolution.
+
+    Layers hold (components, ny, nx): species, or times.
+    """
     rows, columns = scene.padded
-    total = np.zeros((len(scene.magnetisation), rows, columns), np.complex64)
+    count = len(layers[0][1]) if layers else len(scene.magnetisation)
+    total = np.zeros((count, rows, columns), np.complex64)
     wound = np.exp(1j * wave[1] * scene.y)[:, None] * np.exp(1j * wave[0] * scene.x)
     wound = wound.astype(np.complex64)
     for response, content in layers:
