@@ -47,7 +47,8 @@ class Settings:
     reference
         How to read the reference; by default the way that leaves least noise.
     tone
-        Take the response and each row's phase from the tone, where the acquisition has one.
+        Take the response and each row's phase from the tone, where the acquisition has one. It is
+        taken out of the samples in any case.
     mains
         Look for pickup from the mains and remove it.
     common_noise

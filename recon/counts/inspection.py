@@ -20,8 +20,8 @@ LOOKED_AT = 8
 JITTERS = 4.0
 """Standard deviations of chi-squared beyond which the tone's phases are said to jitter."""
 
-MEMORY = 2**28
-"""Bytes of frames that the first look keeps, at most."""
+FEWEST, PLENTY = 4, 2**23
+"""Rows looked at in any case, and frames times channels that are enough."""
 
 
 @dataclass(frozen=True, eq=False)
@@ -81,7 +81,7 @@ def inspect(
 ) -> Inspection:
     """Look at up to `LOOKED_AT` rows spread over the record."""
     held = _spread_rows(record, use)
-    lines = tone_lines(record) if tone else ()
+    lines = tone_lines(record)
     plain = Demodulator.build(record.acquisition, record.instrument, record.protocol, lines)
     if reference is None:
         reference = _quietest(record, held[:2], plain)
@@ -152,8 +152,7 @@ def without_offset(counts: Counts, offset: np.float32) -> Frames:
 
 def _spread_rows(record: CountsRecord, use: NDArray[np.int64]) -> list[tuple[Counts, Counts]]:
     """Copies of a few rows spread over the record."""
-    size = 4 * int(np.prod(record.row_shape))
-    count = int(np.clip(MEMORY // (3 * size), 1, LOOKED_AT))
+    count = int(np.clip(PLENTY // int(np.prod(record.row_shape)), FEWEST, LOOKED_AT))
     wanted = set(use[np.linspace(0, len(use) - 1, min(count, len(use))).round().astype(int)])
     held = []
     for row in sorted(int(one) for one in wanted):

@@ -103,7 +103,7 @@ def stream(
     phasor: ComplexArray = np.zeros(channels, complex)
     saturated: NDArray[np.bool_] = np.zeros(channels, bool)
     rows: list[tuple[Any, ...]] = []
-    used = set(use.tolist())
+    used, tones = set(use.tolist()), int(counts.acquisition.tone is not None)
     for where, signals, references in prefetched(counts.rows()):
         for row in range(where.start, where.stop):
             if row not in used:
@@ -118,7 +118,7 @@ def stream(
             light += level
             saturated |= full
             scratch.add(int(counts.shot[row]), samples)
-            pickup = lines[int(tone) :].mean(axis=1)
+            pickup = lines[tones:].mean(axis=1)
             rows.append((row, counts.shot[row], counts.clock_time[row], level.mean(), mean, pickup))
             progress("converting counts", (row + 1) / len(counts))
     columns = [np.array(column) for column in zip(*rows, strict=True)]

@@ -167,7 +167,7 @@ def true_fields(
     refinement = (options.axial_refinement, options.lateral_refinement)
     scene = Scene.build(specimen, instrument, protocol, refinement, options.wavevector_jitter, seed)
     _check_memory(scene, options, in_file=True)
-    fields, strongest = _true_fields(scene, specimen, options.spreading, progress)
+    fields, strongest = _true_fields(scene, specimen, options, progress)
     _warn_if_not_linear(strongest, instrument.readout)
     return fields
 
