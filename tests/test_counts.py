@@ -173,6 +173,21 @@ def test_bad_channels_are_found_and_named(tmp_path: Path) -> None:
     assert weight is not None and (weight[~others] == 0).all()
     hot = (truth.channels.dark > 0) & others
     assert hot.any() and (weight[hot] < 0.8 * np.median(weight)).all()
+    assert np.array_equal(done.channels.warm, hot)
+    assert "hot, with a dark current" in str(done.channels)
+
+
+@pytest.mark.parametrize("photons", [1e5, 4e5, 1.6e6])
+def test_the_mains_frequency_has_a_true_error(tmp_path: Path, photons: float) -> None:
+    pull = []
+    for seed in range(5):
+        offset = (seed - 2) * 0.11
+        flaws = Imperfections(pickup=3e-3, mains_offset_Hz=offset)
+        counts, _ = counted(tmp_path / f"{seed}.h5", flaws, seed=seed, photons=photons, shots=8)
+        pickup = convert(counts).inspection.pickup
+        assert pickup is not None
+        pull.append((pickup.frequency_Hz - 50 - offset) / pickup.standard_error_Hz)
+    assert 0.2 < np.sqrt(np.mean(np.square(pull))) < 2.2
 
 
 def test_pickup_is_found_with_its_error_and_removed(tmp_path: Path) -> None:

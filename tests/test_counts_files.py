@@ -108,6 +108,29 @@ def test_a_writer_that_is_killed_leaves_whole_rows_and_another_goes_on(
     assert np.array_equal(record.row(3)[0], whole.row(3)[0])
 
 
+def _hold(path: str, go: object, done: object) -> None:
+    with h5py.File(path, "r+"):
+        done.set()  # type: ignore[attr-defined]
+        go.wait(30)  # type: ignore[attr-defined]
+
+
+def test_a_file_that_another_program_writes_is_one_line(
+    whole: CountsRecord, tmp_path: Path
+) -> None:
+    path = tmp_path / "held.h5"
+    shutil.copy(whole.path, path)
+    context = multiprocessing.get_context("spawn")
+    go, done = context.Event(), context.Event()
+    other = context.Process(target=_hold, args=(str(path), go, done))
+    other.start()
+    assert done.wait(60)
+    text = line(path, of=CountsRecord.open)
+    go.set()
+    other.join(60)
+    assert "is being written by another program" in text
+    assert len(CountsRecord.open(path)) == 6
+
+
 def test_a_copy_that_broke_off_gives_its_whole_rows(whole: CountsRecord, tmp_path: Path) -> None:
     cut = tmp_path / "cut.h5"
     data = whole.path.read_bytes()

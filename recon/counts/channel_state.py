@@ -7,6 +7,7 @@ from enum import IntEnum
 
 import numpy as np
 from numpy.typing import NDArray
+from scipy.ndimage import median_filter
 
 from recon.errors import InputError
 
@@ -17,7 +18,10 @@ DARK = 0.05
 """Share of the median light below which a channel is dark."""
 
 HOT = 0.5
-"""Share of the contrast its light leads to expect below which a bright channel is hot."""
+"""Share of the usual contrast below which a lit channel is left out as hot."""
+
+WARM_LIGHT, WARM_CONTRAST = 1.15, 0.85
+"""Light above and contrast below that of a channel's neighbours, of one with a dark current."""
 
 FAINT = 0.05
 """Share of the median information below which a channel is of no use."""
@@ -68,6 +72,19 @@ class ChannelState:
         return np.asarray(self.state == State.GOOD)
 
     @property
+    def warm(self) -> NDArray[np.bool_]:
+        """Good channels with a dark current: more light and less contrast than their neighbours.
+
+        They are used, with the response and noise that were measured.
+        """
+        if self.light.size < 9:
+            return np.zeros(self.light.shape, bool)
+        around = (median_filter(one, 5, mode="nearest") for one in (self.light, self.contrast))
+        light, contrast = around
+        brighter = self.light > WARM_LIGHT * light
+        return np.asarray(self.good & brighter & (self.contrast < WARM_CONTRAST * contrast))
+
+    @property
     def noise_sd(self) -> float:
         """Noise of a channel of average information, 1/√⟨1/σ²⟩ over good channels, tesla."""
         return float(1 / np.sqrt(np.mean(1 / self.noise[self.good] ** 2)))
@@ -85,7 +102,11 @@ class ChannelState:
 
     def __str__(self) -> str:
         bad = [f"{self.count(s)} {s.name.lower()}" for s in State if s and self.count(s)]
-        return f"{self.count(State.GOOD)} good channels" + (f", {', '.join(bad)}" if bad else "")
+        warm = int(self.warm.sum())
+        good = f"{self.count(State.GOOD)} good channels"
+        if warm:
+            good += f" ({warm} of them hot, with a dark current, but usable)"
+        return good + (f", {', '.join(bad)}" if bad else "")
 
 
 def judge(
