@@ -8,6 +8,8 @@ the species do over time, as independent: a phase common to all shots then drops
 Depth and height above the face act alike: what tells them apart is that nothing lies below the
 face and that planes resemble each other. So the standard error, the inverse Hessian of the
 evidence with the prior's numbers at their best, is that of a sample which the prior describes.
+What the sample does within a voxel comes on top: about a hundredth of the voxel's height in
+simulated records, and more for the layer's thickness, which hardly shows in the field.
 """
 
 from __future__ import annotations
