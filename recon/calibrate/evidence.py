@@ -15,7 +15,7 @@ simulated records, and more for the layer's thickness, which hardly shows in the
 from __future__ import annotations
 
 from collections.abc import Sequence
-from dataclasses import dataclass
+from dataclasses import dataclass, field
 
 import numpy as np
 from numpy.typing import NDArray
@@ -110,6 +110,7 @@ class _Search:
     unknown: tuple[Quantity, ...]
     values: dict[str, float]
     passes: int = 0
+    _known: dict[tuple[float, ...], float] = field(default_factory=dict)
 
     def run(self, stated: Sequence[Estimate], progress: Progress | None) -> GeometryFit:
         reach = np.array([one.reach for one in self.unknown])
@@ -132,5 +133,9 @@ class _Search:
         return values
 
     def _value(self, point: FloatArray) -> float:
-        self.passes += 1
-        return evidence(block_statistics(self.data, self._values_of(point))).value
+        key = tuple(point)
+        if key not in self._known:
+            self.passes += 1
+            found = evidence(block_statistics(self.data, self._values_of(point)))
+            self._known[key] = found.value
+        return self._known[key]
