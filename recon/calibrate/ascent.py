@@ -20,7 +20,7 @@ FloatArray = NDArray[np.floating]
 ENOUGH = 0.1
 """Largest step, in standard errors, that ends the search."""
 MOST_PASSES = 12
-HALVINGS = 5
+CUTS = 5
 DOUBTFUL_MISFIT = 1.2
 
 
@@ -112,7 +112,8 @@ def ascend(
 ) -> tuple[dict[str, float], Evaluation, Told, int]:
     """Gauss–Newton until the step is below a tenth of the standard error.
 
-    A step is halved while it lowers the likelihood, and never exceeds a quantity's reach.
+    A step is cut to a third while it lowers the likelihood or leaves what can be modelled, and
+    never exceeds a quantity's reach.
 
     Returns
     -------
@@ -131,10 +132,14 @@ def ascend(
             if passes >= MOST_PASSES:
                 warnings.warn("the search did not settle", InputWarning, stacklevel=3)
             return _moved(values, unknown, step), here, judged, passes
-        for _ in range(HALVINGS):
+        for _ in range(CUTS):
             trial = _moved(values, unknown, step)
-            there = evaluate(trial)
             passes += 1
+            try:
+                there = evaluate(trial)
+            except InputError:  # beyond what can be modelled
+                step = step / 3
+                continue
             if there.value > here.value:
                 values, here = trial, there
                 break

@@ -3,7 +3,8 @@
 The lateral block of a matrix is split into a turn and a symmetric stretch, B = R(θ) T: strengths
 are T_xx and T_yy, the shear is T_xy. Pixels are the ruler, so a camera turned by α and magnified
 by m puts the common factor R(α)/m in front of both matrices; what the two have in common is the
-camera's, or that of all gradients together: no record tells these apart.
+camera's, or that of all gradients together: no record tells these apart. Each kind of gradient may
+be off by itself, so the camera's part is their plain mean, uncertain by half of their difference.
 """
 
 from __future__ import annotations
@@ -132,7 +133,7 @@ def _slopes(fit: GeometryFit, derive: Callable[[dict[str, float]], Told]) -> Flo
 
 
 def _camera(fit: GeometryFit) -> tuple[list[Estimate], str]:
-    """What both matrices share: means weighted by the inverse of their joint covariance."""
+    """The mean of what both matrices have; half of their difference counts as an error."""
 
     def derive(values: dict[str, float]) -> Told:
         told: Told = {}
@@ -148,10 +149,8 @@ def _camera(fit: GeometryFit) -> tuple[list[Estimate], str]:
     covariance = slopes @ fit.covariance @ slopes.T
     told = []
     for part in (0, 1):
-        two = covariance[part::2, part::2]
-        weight = np.linalg.pinv(two + 1e-18 * np.eye(2)).sum(axis=0)
-        weight /= weight.sum()
-        told.append((float(weight @ numbers[part::2]), float(np.sqrt(weight @ two @ weight))))
+        own, half = covariance[part::2, part::2].sum() / 4, np.diff(numbers[part::2])[0] / 2
+        told.append((float(numbers[part::2].mean()), float(np.hypot(np.sqrt(own), half))))
     (turn, turn_error), (scale, scale_error) = told
     size = float(np.exp(-scale))
     return [

@@ -23,7 +23,7 @@ class Estimate:
         The estimate.
     standard_error
         One standard deviation; 0 for a stated value, infinite for one that the record cannot tell,
-        whose value is then the nominal one.
+        whose value then is nominal, or nominal but for a combination that the record does tell.
     fixed
         Stated by a person, not estimated.
 
@@ -60,5 +60,5 @@ class Estimate:
         if self.fixed:
             return f"{self.name} = {self.value:.6g}{unit} (stated)"
         if not self.known:
-            return f"{self.name} = {self.value:.6g}{unit} (nominal; the record cannot tell)"
+            return f"{self.name} = {self.value:.6g}{unit} (the record cannot tell)"
         return f"{self.name} = {self.value:.6g} ± {self.standard_error:.2g}{unit}"
