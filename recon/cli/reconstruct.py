@@ -81,10 +81,11 @@ def verb(
 ) -> None:
     """Amounts of the RECORD's species in mM, or its complex cube, with standard errors."""
     unknown = unknown_named(cube, diffusion)
-    names = priors or (("joint-total-variation" if cube else "total-variation"),)
+    measured = Record.open(record)
+    names = priors or default_names(cube, measured)
     with progress_line() as line:
         result = reconstruct(
-            Record.open(record),
+            measured,
             unknown,
             estimator_named(names, unknown, weight, replicas),
             progress=line,
@@ -94,6 +95,14 @@ def verb(
     assert isinstance(result, (SpeciesMaps, Cube))
     result.save(output)
     click.echo(f"{output}: {summary(result)}")
+
+
+def default_names(cube: bool, record: Record) -> tuple[str, ...]:
+    """The names of what `recon.reconstruct` assumes by default."""
+    if not cube:
+        return ("total-variation",)
+    indirect = len(record.protocol.evolutions[0]) > 1
+    return ("joint-total-variation", *(("local-low-rank",) if indirect else ()))
 
 
 def unknown_named(cube: bool, diffusion: str | None) -> Unknown:
