@@ -69,6 +69,7 @@ from recon.specimen import Species
     metavar="Z,Y,X",
     help="Draw this voxel's spectrum and fit too (with --figures); repeatable.",
 )
+@click.option("--memory-limit-gib", type=float, default=8.0, show_default=True)
 @click.option("--scale-error", type=float, default=0.0, help="Relative error of the scale.")
 def verb(
     cube: Path,
@@ -86,6 +87,7 @@ def verb(
     maps: Path | None,
     figures: Path | None,
     voxels: tuple[str, ...],
+    memory_limit_gib: float,
 ) -> None:
     """Fit every voxel of CUBE with the species of the RECORD it came from."""
     if (reference is None) != (reference_amount is None):
@@ -103,7 +105,8 @@ def verb(
         held, patterns = without_line(held, measured, strong_line_ppm, line)
         moved = ShiftEstimate(shift_bound).estimate(held, patterns) if field_shift else None
         held = held if moved is None else moved.corrected(held)
-        fitted = settings.fit(held, patterns, progress=line.counted("fitting spectra"))
+        counted = line.counted("fitting spectra")
+        fitted = settings.fit(held, patterns, None, counted, memory_limit_gib)
     scale: CalibratedResponse | ReferenceSpecies = CalibratedResponse(scale_error)
     if reference is not None and reference_amount is not None:
         scale = ReferenceSpecies(reference, reference_amount, scale_error)
