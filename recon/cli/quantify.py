@@ -12,6 +12,7 @@ from recon import figures as figures_of
 from recon.basis import species_lines
 from recon.cli.common import ProgressLine, progress_line
 from recon.errors import InputError
+from recon.grid import Grid
 from recon.instrument import Instrument
 from recon.quantify import (
     Baseline,
@@ -115,7 +116,7 @@ def verb(
     result = amounts_of(held, scaled, remarks)
     result.save(output)
     click.echo(f"{output}: {len(scaled.names)} species")
-    click.echo(table(scaled))
+    click.echo(table(scaled, held.grid))
     for remark in (*held.account.remarks[before:], *remarks):
         click.echo(f"note: {remark}")
     if figures is not None:
@@ -216,10 +217,10 @@ def amounts_of(cube: Cube, fitted: Fitted, remarks: tuple[str, ...]) -> SpeciesM
     )
 
 
-def table(fitted: Fitted) -> str:
+def table(fitted: Fitted, grid: Grid) -> str:
     """Mean, error and limits of every species at every depth, and the share worth reading."""
     reach, readable = limits(fitted), labels(fitted).readable
-    heads = ("plane", "mean", "error", "detection", "quantify", "readable")
+    heads = ("height µm", "mean", "error", "detection", "quantify", "readable")
     lines = [f"{'mM':<14}" + "".join(f"{head:>11}" for head in heads)]
     for place, name in enumerate(fitted.names):
         for level, values in enumerate(fitted.amounts[place]):
@@ -229,9 +230,12 @@ def table(fitted: Fitted) -> str:
             low, high = reach.detection[place, level], reach.quantification[place, level]
             numbers = (float(values.mean()), error, float(low), float(high))
             share = f"{100 * readable[place, level].mean():.0f} %"
-            cells = [f"{level + 1:>11d}", *(f"{number:>11.4g}" for number in numbers)]
+            cells = [
+                f"{grid.heights[level] * 1e6:>11.3g}",
+                *(f"{number:>11.4g}" for number in numbers),
+            ]
             lines.append(f"{name if level == 0 else '':<14}" + "".join(cells) + f"{share:>11}")
-    lines.append("limits: 3 and 10 standard errors of the blank (IUPAC), one voxel, by plane")
+    lines.append("limits: 3 and 10 standard errors of the blank (IUPAC), one voxel, by height")
     return "\n".join(lines)
 
 
