@@ -21,7 +21,7 @@ from recon.forward.general_model import GeneralModel
 from recon.forward.general_statistics import gather
 from recon.forward.grouped import accumulate_grouped, data_term
 from recon.forward.lattice import ROUNDING
-from recon.priors import Frame, NonNegative, Prior, TotalVariation
+from recon.priors import Frame, LocalLowRank, NonNegative, Prior, TotalVariation
 from recon.record import Record
 from recon.result import Account, Result
 from recon.solvers.estimate import Estimator, Progress, silent
@@ -32,10 +32,17 @@ from recon.unknown import AnyStatistics, SpeciesAmounts, Unknown
 ComplexArray = NDArray[np.complexfloating]
 
 
-def default_estimator(unknown: Unknown) -> Estimator:
-    """Total variation; amounts are also non-negative. The weight chooses itself."""
+def default_estimator(unknown: Unknown, record: Record | None = None) -> Estimator:
+    """Total variation; amounts are also non-negative. The weight chooses itself.
+
+    A cube has its edges in common over time. It is of low rank besides: where all shots share
+    their times its courses are compressed to the leading ones, and where each has an evolution
+    time of its own every patch is taken to hold few independent courses.
+    """
     if unknown.real:
         return Penalised((TotalVariation(), NonNegative()))
+    if record is not None and len(record.protocol.evolutions[0]) > 1:
+        return Penalised((TotalVariation(joint=True), LocalLowRank()))
     return Penalised((TotalVariation(joint=True),))
 
 
@@ -72,7 +79,7 @@ def reconstruct(
         The record does not fit its grid, is blind to a species, or memory would not suffice.
     """
     unknown = unknown or SpeciesAmounts()
-    estimator = estimator or default_estimator(unknown)
+    estimator = estimator or default_estimator(unknown, record)
     _check_memory(estimate_memory(record, unknown, estimator), memory_limit_gib)
     reading = Reading(record)
     reality = Reality.of(record) if reality is None else reality
@@ -244,7 +251,7 @@ def estimate_memory(record: Record, unknown: Unknown, estimator: Estimator | Non
     shape = (components, *grid.shape)
     cube = np.prod(shape) * (4 if unknown.real else 8)
     frame = Frame(shape, grid.voxel, np.ones(components))
-    priors: Sequence[Prior] = getattr(estimator or default_estimator(unknown), "priors", ())
+    priors: Sequence[Prior] = getattr(estimator or default_estimator(unknown, record), "priors", ())
     images = sum(prior.on(frame).redundancy for prior in priors)
     one_detector = record.shape[2:] == (1, 1)
     pixel_y, pixel_x = (

@@ -182,7 +182,8 @@ class ComplexCube:
             x = np.tensordot(expand.astype(np.complex64), x, 1)
             if width is not None:
                 power = np.abs(expand.astype(np.complex64)) ** 2
-                width = np.tensordot(power / power.sum(axis=1, keepdims=True), width, 1)
+                with np.errstate(invalid="ignore"):  # widths may be infinite: undefined
+                    width = np.tensordot(power / power.sum(axis=1, keepdims=True), width, 1)
             if error is not None:
                 error = np.sqrt(np.tensordot(np.abs(expand.astype(np.complex64)) ** 2, error**2, 1))
         return Cube(

@@ -187,10 +187,16 @@ def test_verb_compares(record, cube, tmp_path, monkeypatch, capsys):
     cube.save("cube.h5")
     main(["reconstruct", "record.h5", "--replicas", "8"])
     held = ["--shift-bound-Hz", "0", "--width-bound-Hz", "0"]
-    main(["quantify", "cube.h5", "record.h5", "--maps", "result.h5", "--figures", "drawn", *held])
+    drawn = ["--figures", "drawn", "--voxel", "0,5,5", *held]
+    main(["quantify", "cube.h5", "record.h5", "--maps", "result.h5", *drawn])
     out = capsys.readouterr().out
     assert "compatible" in out and "IUPAC" in out
     made = load_result("amounts.h5")
     assert any("compatible" in remark for remark in made.account.remarks)
     assert made.account.provenance["limits"]["a"]["detection_mM"][0] > 0
     assert (tmp_path / "drawn" / "labels.png").exists()
+    assert (tmp_path / "drawn" / "voxel-0-5-5.png").exists()
+    for voxel, told in (("0,5", "z,y,x"), ("0,24,0", "at most 1,23,23")):
+        with pytest.raises(SystemExit):
+            main(["quantify", "cube.h5", "record.h5", "--voxel", voxel])
+        assert told in capsys.readouterr().err

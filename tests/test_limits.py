@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 import json
+import tracemalloc
 from dataclasses import replace
 
 import nibabel
@@ -186,3 +187,17 @@ def test_labels_are_kept_handed_over_and_drawn(tmp_path):
     assert figures.save(picture, tmp_path / "labels.png").stat().st_size > 1000
     with pytest.raises(InputError, match="one map per species"):
         figures.label_maps(Labels(made.values[:1], made.meaning), fitted.names, GRID)
+
+
+def test_memory_is_foreseen(tmp_path):
+    """Within a factor of 3 of what Python's own account of allocations says, and refused before."""
+    cube = cube_of(full())
+    parts = patterns(cube)
+    tracemalloc.start()
+    HELD.fit(cube, parts)
+    peak = tracemalloc.get_traced_memory()[1]
+    tracemalloc.stop()
+    need = HELD.memory(cube, parts)
+    assert need / 3 < peak < 6 * need  # chunks in work weigh much in so small a cube
+    with pytest.raises(InputError, match=r"needs about .* the limit is 0.001 GiB"):
+        HELD.fit(cube, parts, memory_limit_gib=1e-3)

@@ -62,9 +62,6 @@ RIDGE = "ridge"
     default=None,
     help="NumPy file (rows, columns): gain of every channel, 0 where it is dead.",
 )
-@click.option(
-    "--off-lattice", is_flag=True, help="Take wavevectors as stated, not on the grid's lattice."
-)
 @diffusion_option
 @click.option("--memory-limit-gib", type=float, default=8.0, show_default=True)
 def verb(
@@ -75,25 +72,33 @@ def verb(
     weight: float | None,
     replicas: int,
     channel_gain: Path | None,
-    off_lattice: bool,
     diffusion: str | None,
     memory_limit_gib: float,
 ) -> None:
     """Amounts of the RECORD's species in mM, or its complex cube, with standard errors."""
     unknown = unknown_named(cube, diffusion)
-    names = priors or (("joint-total-variation" if cube else "total-variation"),)
+    measured = Record.open(record)
+    names = priors or default_names(cube, measured)
     with progress_line() as line:
         result = reconstruct(
-            Record.open(record),
+            measured,
             unknown,
             estimator_named(names, unknown, weight, replicas),
             progress=line,
             memory_limit_gib=memory_limit_gib,
-            reality=reality_of(channel_gain, off_lattice),
+            reality=reality_of(channel_gain),
         )
     assert isinstance(result, (SpeciesMaps, Cube))
     result.save(output)
     click.echo(f"{output}: {summary(result)}")
+
+
+def default_names(cube: bool, record: Record) -> tuple[str, ...]:
+    """The names of what `recon.reconstruct` assumes by default."""
+    if not cube:
+        return ("total-variation",)
+    indirect = len(record.protocol.evolutions[0]) > 1
+    return ("joint-total-variation", *(("local-low-rank",) if indirect else ()))
 
 
 def unknown_named(cube: bool, diffusion: str | None) -> Unknown:
@@ -111,8 +116,8 @@ def unknown_named(cube: bool, diffusion: str | None) -> Unknown:
     return ComplexCube()
 
 
-def reality_of(channel_gain: Path | None, off_lattice: bool) -> Reality | None:
-    """What departs from the ideal model; None if nothing does.
+def reality_of(channel_gain: Path | None) -> Reality | None:
+    """Channels with the gains of a file; None leaves it to the record.
 
     Raises
     ------
@@ -120,7 +125,7 @@ def reality_of(channel_gain: Path | None, off_lattice: bool) -> Reality | None:
         The file holds no two-dimensional table of finite numbers.
     """
     if channel_gain is None:
-        return Reality() if off_lattice else None
+        return None
     try:
         gain = np.load(channel_gain, allow_pickle=False)
     except (OSError, ValueError, EOFError) as error:

@@ -19,6 +19,7 @@ from collections.abc import Callable, Sequence
 from dataclasses import dataclass, replace
 
 import numpy as np
+import scipy.fft
 from numpy.typing import NDArray
 
 from recon.grid import Grid
@@ -113,10 +114,11 @@ class _Test:
         self.courses = [np.asarray(pattern.courses, complex) for pattern in patterns]
         self.times = np.asarray(cube.sample_times, float)
         self.reference, self.larmor = cube.reference_shift_ppm, cube.larmor_frequency
-        scaled = np.where(noise.known, np.sqrt(2) / noise.sigma, 0) * cube.values
+        weight = np.where(noise.known, np.sqrt(2) / noise.sigma, 0).astype(np.float32)
+        waves = scipy.fft.fft2(weight * cube.values, workers=2)
         self.data, self.wave = [], []
         for band, wave in _bands(cube.grid):
-            inside = np.fft.ifft2(np.fft.fft2(scaled) * band)
+            inside = scipy.fft.ifft2(waves * band, workers=2)
             self.data.append(_leading(_stacked(inside.reshape(len(self.times), -1))))
             self.wave.append(wave)
         self.rates = [_rate(course, self.times) for course in self.courses]
@@ -249,7 +251,7 @@ def _bands(grid: Grid) -> list[tuple[FloatArray, float]]:
     for band in range(BANDS):
         inside = number == band
         if inside.any():
-            bands.append((inside.astype(float), float(np.sqrt((wave[inside] ** 2).mean()))))
+            bands.append((inside.astype(np.float32), float(np.sqrt((wave[inside] ** 2).mean()))))
     return bands
 
 
@@ -263,11 +265,11 @@ def _leading(data: FloatArray) -> FloatArray:
     Source: Halko, Martinsson & Tropp, SIAM Review 53:217 (2011).
     """
     width = min(LEADING + 8, *data.shape)
-    random = np.random.default_rng(0)
-    span, _ = np.linalg.qr(data @ random.standard_normal((data.shape[1], width)))
+    random = np.random.default_rng(0).standard_normal((data.shape[1], width), np.float32)
+    span, _ = np.linalg.qr(data @ random)
     span, _ = np.linalg.qr(data @ (data.T @ span))
     vectors, values, _ = np.linalg.svd(span.T @ data, full_matrices=False)
-    return np.asarray((span @ vectors * values)[:, :LEADING])
+    return np.asarray((span @ vectors * values)[:, :LEADING], float)
 
 
 def _rate(courses: ComplexArray, times: FloatArray) -> float:

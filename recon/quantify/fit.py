@@ -57,6 +57,7 @@ class Fit:
         patterns: Sequence[Pattern],
         noise_sd: FloatArray | None = None,
         progress: Callable[[int, int], None] | None = None,
+        memory_limit_gib: float = 8.0,
     ) -> Fitted:
         """Fit all voxels.
 
@@ -69,12 +70,27 @@ class Fit:
         Raises
         ------
         InputError
-            No pattern, patterns that cannot be told apart, or no noise.
+            No pattern, patterns that cannot be told apart, no noise, or memory would not suffice.
         """
         if not patterns:
             raise InputError("there is no pattern to fit", "fit")
         check_distinct(patterns)
+        need = self.memory(cube, patterns)
+        if need > memory_limit_gib * 2**30:
+            raise InputError(
+                f"needs about {need / 2**30:.1f} GiB, the limit is {memory_limit_gib:g} GiB",
+                "fit",
+                "raise the limit, or use fewer voxels or species",
+            )
         rules = (self.shift_Hz, self.decay_per_s, self.phase_rad)
         noise = VoxelNoise.of(cube, noise_sd)
         work = GaussNewton(rules, self.baseline, cube, patterns, noise)
         return work.run(self.iterations, progress)
+
+    def memory(self, cube: Cube, patterns: Sequence[Pattern]) -> int:
+        """Bytes that a fit takes, roughly: three copies of the cube, and inner products."""
+        parts = sum(pattern.courses.shape[1] for pattern in patterns)
+        broad = len(self.baseline.decay_ms)
+        products = 16 * (3 * parts**2 + 2 * parts * (1 + broad) + broad)
+        parameters = 8 * (parts + 2 * broad + 8) + 4 * len(patterns) ** 2
+        return int(np.prod(cube.grid.shape)) * (24 * len(cube.values) + products + parameters)

@@ -36,6 +36,8 @@ DOMINANT = 40.0
 """How much stronger than the rest a line must be for its removal to be safe."""
 FARTHEST = 10.0
 """Largest change of a rate in one step, 1/s."""
+LEFTOVER = 1.5
+"""Residual energy over the median from which a voxel is taken to be stuck."""
 LONGEST = 64
 """Decimated samples that are used at most; the line has decayed after them."""
 
@@ -241,10 +243,33 @@ def _fitted_line(
 ) -> tuple[ComplexArray, ComplexArray]:
     """The line (V, T) and its poles' amplitudes at time 0 (V, poles).
 
-    Known courses (T, C) stand beside it, all moved by exp(rate t), `moved` (V,).
+    Known courses (T, C) stand beside it, all moved by exp(rate t), `moved` (V,). Voxels that leave
+    much more than most start again from the poles of the voxel that leaves least.
     """
     count = rates.shape[1]
     rates = np.concatenate([rates, moved[:, None]], axis=1)
+    best, least = _refined(turned, rates, known, times, refinements)
+    stuck = np.flatnonzero(least > LEFTOVER * np.median(least))
+    if stuck.size:
+        donor = int(least.argmin())
+        start = best[donor] + (moved[stuck] - moved[donor])[:, None]
+        again, left = _refined(turned[stuck], start, known, times, 2 * refinements)
+        better = left < least[stuck]
+        best[stuck[better]] = again[better]
+    waves, beside = _waves(best[:, :count], times), _waves(best[:, count:], times) * known
+    amplitudes = _solved(np.concatenate([waves, beside], axis=2), turned)[:, :count]
+    return np.matmul(waves, amplitudes[..., None])[..., 0], amplitudes
+
+
+def _refined(
+    turned: ComplexArray,
+    rates: ComplexArray,
+    known: ComplexArray,
+    times: FloatArray,
+    refinements: int,
+) -> tuple[ComplexArray, FloatArray]:
+    """Gauss–Newton on the rates (V, poles + 1), the last that of the known courses; Σ|rest|²."""
+    count = rates.shape[1] - 1
     best, least = rates, np.full(len(rates), np.inf)
     for _ in range(refinements + 1):
         waves = _waves(rates, times)
@@ -262,6 +287,4 @@ def _fitted_line(
         # a step that made things worse is taken back by half
         rates = np.where(better[:, None], rates + step, (rates + best) / 2)
         rates[:, :count] = np.minimum(rates[:, :count].real, 0) + 1j * rates[:, :count].imag
-    waves, beside = _waves(best[:, :count], times), _waves(best[:, count:], times) * known
-    amplitudes = _solved(np.concatenate([waves, beside], axis=2), turned)[:, :count]
-    return np.matmul(waves, amplitudes[..., None])[..., 0], amplitudes
+    return best, least
