@@ -25,8 +25,8 @@ from recon.calibrate.ascent import GeometryFit
 from recon.calibrate.estimate import Estimate
 from recon.calibrate.evidence import standoff_from_record
 from recon.calibrate.geometry_fit import geometry_from_sample
-from recon.calibrate.geometry_parameters import LAYER, SIGNAL, described
-from recon.calibrate.gradients_fit import LATERAL, gradients_from_record
+from recon.calibrate.geometry_parameters import LATERAL, LAYER, SIGNAL, described
+from recon.calibrate.gradients_fit import gradients_from_record
 from recon.record import Record
 from recon.simulate import simulate
 from recon.specimens.muscle import Muscle

@@ -17,16 +17,17 @@ from recon.calibrate.decomposition import decomposition
 from recon.calibrate.estimate import Estimate
 from recon.calibrate.evidence import standoff_from_record, unmixed
 from recon.calibrate.geometry_fit import geometry_from_sample
+from recon.calibrate.geometry_from_record import geometry_from_record
 from recon.calibrate.geometry_parameters import (
     BIAS,
+    LATERAL,
     LAYER,
-    NUCLEAR_MATRIX,
     SENSOR_MATRIX,
     SIGNAL,
     nominal_values,
     with_geometry,
 )
-from recon.calibrate.gradients_fit import LATERAL, gradients_from_record
+from recon.calibrate.gradients_fit import gradients_from_record
 from recon.calibrate.shifted import block_statistics
 from recon.errors import InputError, InputWarning
 from recon.forward import ForwardModel, accumulate
@@ -79,7 +80,9 @@ def test_a_sample_that_is_known_gives_standoff_and_gradients():
     units = errors_in_units(
         [record] * SEEDS,
         truth,
-        lambda noisy: geometry_from_sample(noisy, SAMPLE, LAYER[:1] + SIGNAL + LATERAL),
+        lambda noisy: geometry_from_sample(
+            noisy, SAMPLE, LAYER[:1] + SIGNAL + LATERAL, shots=np.arange(10)
+        ),
         allowance=np.array([0.005, 0.002, 0.05, 1e-4, 1e-4, 1e-4, 1e-4]),
     )
     # 63 errors of a normal distribution: 68 % within one standard error
@@ -178,10 +181,13 @@ def test_camera_rotation_is_what_both_gradients_share():
 def test_what_the_record_cannot_tell_is_named():
     record = measured(SAMPLE, NOMINAL, FLAT, {"depth_um": 1.1})
     record = noisy(record, spread(record) / 0.5, 0)
-    no_axial = gradients_from_record(record, NUCLEAR_MATRIX[:3], shots=np.arange(8))
+    no_axial = geometry_from_record(
+        record, [*LATERAL, "nuclear_matrix_xz", "depth_um"], shots=np.arange(10)
+    )
     assert not no_axial["nuclear_matrix_xz"].known
     assert no_axial["nuclear_matrix_xz"].value == 0
     assert no_axial["nuclear_matrix_xx"].known
+    assert no_axial["depth_um"].known
     assert no_axial.undetermined == ("the record cannot tell nuclear_matrix_xz; state it",)
     thin = noisy(record, spread(record) * 20, 0)
     together = geometry_from_sample(thin, SAMPLE, LAYER + SIGNAL, shots=np.arange(4))
@@ -189,6 +195,16 @@ def test_what_the_record_cannot_tell_is_named():
     assert any("depth_um" in one and "apart" in one for one in together.undetermined)
     with pytest.raises(InputError, match="no quantity 'depth'"):
         standoff_from_record(record, ["depth"])
+
+
+def test_axial_gradients_follow_from_the_evidence():
+    truth = {"nuclear_matrix_zz": 1.06, "nuclear_matrix_xz": 0.02}
+    strong = table(shots=24, axial_bound_rad_per_um=0.5)
+    record = measured(SAMPLE, NOMINAL, strong, truth)
+    fit = standoff_from_record(noisy(record, spread(record), 0), list(truth))
+    for name, value in truth.items():
+        assert abs(fit[name].value - value) < 3 * fit[name].standard_error + 0.003, str(fit)
+    assert fit["nuclear_matrix_xz"].standard_error < 0.01
 
 
 def test_stated_values_stay():
@@ -251,8 +267,8 @@ def test_mistakes_are_one_line():
     record = measured(SAMPLE, NOMINAL, FLAT, {})
     sample = replace(SAMPLE, maps=None)
     assert "no maps" in line(record, sample, of=geometry_from_sample)
-    assert "breaks the blocks" in line(record, MATRIX, of=standoff_from_record)
-    assert "not a gradient's" in line(record, ["depth_um"], of=gradients_from_record)
+    assert "not told this way" in line(record, ["signal_scale"], of=standoff_from_record)
+    assert "no lateral gradient's" in line(record, ["depth_um"], of=gradients_from_record)
     assert "twice" in line(record, ["depth_um", "depth_um"], of=standoff_from_record)
     nothing = [Estimate("depth_um", "um", 1.0, fixed=True)]
     assert "nothing is left" in line(record, LAYER[:1], nothing, of=standoff_from_record)

@@ -18,6 +18,7 @@ GAIN = 0.01
 MOST_STEPS = 15
 SPREAD = 0.3
 """Half step of differences in standard deviations of the coordinate."""
+TINY = 1e-12
 WIDEST = 15.0
 """How much a half step may grow beyond the one that was given."""
 
@@ -50,7 +51,7 @@ def climb(
     for count in range(MOST_STEPS):
         value, slope, hessian = differences(function, point, widths, least)
         values, vectors = np.linalg.eigh(hessian)
-        curvature = np.maximum(np.abs(values), 1e-3 * np.abs(values).max())
+        curvature = np.maximum(np.abs(values), max(1e-3 * np.abs(values).max(), TINY))
         step = vectors @ ((vectors.T @ slope) / curvature)
         step *= min(1.0, 0.7 / np.abs(step).max())
         if progress is not None:

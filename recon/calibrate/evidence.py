@@ -1,9 +1,9 @@
-"""Standoff, layer thickness and bias direction from a record of something unknown.
+"""Standoff, thickness, bias direction and axial gradients from a record of something unknown.
 
-These leave the blocks of AᴴWA exact, so the evidence of a stationary Gaussian prior
-(`recon.calibrate.stationary`) can be maximised over them together with the prior's own
-hyperparameters. The unknown is taken as complex and its components, an orthonormal basis of what
-the species do over time, as independent: a phase common to all shots then drops out.
+These leave the blocks of AᴴWA exact, and lateral gradients nearly so. The evidence of a stationary
+Gaussian prior (`recon.calibrate.stationary`) can therefore be maximised over them together with the
+prior's own hyperparameters. The unknown is taken as complex and its components, an orthonormal
+basis of what the species do over time, as independent: a phase common to all shots drops out.
 
 Depth and height above the face act alike: what tells them apart is that nothing lies below the
 face and that planes resemble each other. So the standard error, the inverse Hessian of the
@@ -25,8 +25,11 @@ from recon.calibrate.climb import climb
 from recon.calibrate.compressed import Compressed, Progress, compress, inside
 from recon.calibrate.estimate import Estimate
 from recon.calibrate.geometry_parameters import (
+    AXIAL,
     BIAS,
     LAYER,
+    NUCLEAR_MATRIX,
+    SENSOR_MATRIX,
     Quantity,
     nominal_values,
 )
@@ -38,7 +41,7 @@ from recon.record import Record
 
 FloatArray = NDArray[np.floating]
 
-BLOCKS_STAY = frozenset(one.name for one in LAYER + BIAS)
+ALLOWED = frozenset(one.name for one in LAYER + BIAS + AXIAL + NUCLEAR_MATRIX + SENSOR_MATRIX)
 ROUNDING = 1e-12
 """Error of the evidence, in parts of the record's energy."""
 
@@ -52,12 +55,14 @@ def standoff_from_record(
     components: int | None = None,
     progress: Progress | None = None,
 ) -> GeometryFit:
-    """Estimate standoff, thickness and bias direction without knowing the sample.
+    """Estimate standoff, thickness, bias direction, axial gradients without knowing the sample.
+
+    Lateral gradients are better left to `gradients_from_record` unless they are nearly right.
 
     Parameters
     ----------
     quantities
-        Of `LAYER` and `BIAS`.
+        Of `LAYER`, `BIAS`, `AXIAL` and the matrices.
     stated
         Values to keep, calibrated gradients among them; these may lie off the lattice.
     shots, components
@@ -68,13 +73,13 @@ def standoff_from_record(
     Raises
     ------
     InputError
-        A quantity breaks the blocks, or the record has several evolution times.
+        A quantity is told another way, or the record has several evolution times.
     """
     unknown, values = chosen(quantities, stated, nominal_values(record.instrument))
     for one in unknown:
-        if one.name not in BLOCKS_STAY:
+        if one.name not in ALLOWED:
             raise InputError(
-                f"{one.name} breaks the blocks", "calibration", "use gradients_from_record"
+                f"{one.name} is not told this way", "calibration", "use gradients_from_record"
             )
     data = unmixed(record, shots, components)
     search = _Search(data, unknown, values)

@@ -40,7 +40,7 @@ class Quantity:
     nominal
         Where the descriptions hold it already the value is theirs, and this is None.
     step
-        Half step of a central difference; 0 where the derivative is taken another way.
+        First half step of a central difference; 0 where the derivative is taken another way.
     reach
         Standard deviation above which a record is said not to tell the quantity.
     least
@@ -58,7 +58,7 @@ class Quantity:
 def _matrix(name: str, axes: str) -> tuple[Quantity, ...]:
     pairs = [(row, column) for row in axes for column in axes]
     return tuple(
-        Quantity(f"{name}_matrix_{row}{column}", "1", float(row == column), 0.0, 0.2)
+        Quantity(f"{name}_matrix_{row}{column}", "1", float(row == column), 5e-4, 0.2)
         for row, column in pairs
     )
 
@@ -70,7 +70,7 @@ LAYER = (
 BIAS = tuple(Quantity(f"bias_tilt_{n}_deg", "deg", 0.0, 0.3, 20.0) for n in (1, 2))
 NUCLEAR_MATRIX = _matrix("nuclear", "xyz")
 SENSOR_MATRIX = _matrix("sensor", "xy")
-NUCLEAR_DELAY = tuple(Quantity(f"nuclear_delay_{a}_us", "us", 0.0, 0.0, 200.0) for a in "xyz")
+NUCLEAR_DELAY = tuple(Quantity(f"nuclear_delay_{a}_us", "us", 0.0, 1.0, 200.0) for a in "xyz")
 SENSOR_DELAY = tuple(Quantity(f"sensor_delay_{a}_us", "us", 0.0, 0.0, 1.0) for a in "xy")
 SIGNAL = (
     Quantity("signal_scale", "1", 1.0, 0.0, 1.0, 0.0),
@@ -78,6 +78,9 @@ SIGNAL = (
 )
 GRADIENTS = NUCLEAR_MATRIX + NUCLEAR_DELAY + SENSOR_MATRIX + SENSOR_DELAY
 EVERY = {one.name: one for one in LAYER + BIAS + GRADIENTS + SIGNAL}
+AXIAL = tuple(one for one in NUCLEAR_MATRIX if "z" in one.name[-2:]) + NUCLEAR_DELAY[2:]
+"""What changes k_z, or comes of it."""
+LATERAL = tuple(one for one in NUCLEAR_MATRIX if one not in AXIAL)
 WAVE = frozenset(one.name for one in GRADIENTS)
 """Quantities that act through the wavevectors alone."""
 

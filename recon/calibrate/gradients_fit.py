@@ -1,4 +1,4 @@
-"""Gradient matrices and delays from a record of something unknown.
+"""Lateral gradient matrices and delays from a record of something unknown.
 
 Separable least squares: with x̂ = (AᴴWA + Γ⁻¹)⁻¹AᴴWy at the present gradients, the residual
 y − A x̂ depends on the gradients through J = P⊥ (∂A/∂θ) x̂, P⊥ = 1 − A(AᴴWA + Γ⁻¹)⁻¹AᴴW
@@ -6,7 +6,9 @@ y − A x̂ depends on the gradients through J = P⊥ (∂A/∂θ) x̂, P⊥ = 1
 Gauss–Newton on that; the information is 2 Re JᴴWJ. The prior Γ is the stationary one of
 `recon.calibrate.stationary`, its numbers those of largest evidence.
 
-The pixels are the ruler. The sample's position is left open with the unknown itself.
+The pixels are the ruler. The sample's position is left open with the unknown itself. The
+determinant in the evidence is left out: it is flat in what turns and stretches lateral wavevectors,
+but not in k_z, which is why the axial entries are told by `recon.calibrate.evidence`.
 """
 
 from __future__ import annotations
@@ -23,7 +25,8 @@ from recon.calibrate.estimate import Estimate
 from recon.calibrate.evidence import unmixed
 from recon.calibrate.geometry_fit import WaveDerivatives, stages
 from recon.calibrate.geometry_parameters import (
-    NUCLEAR_MATRIX,
+    AXIAL,
+    LATERAL,
     WAVE,
     Quantity,
     described,
@@ -44,7 +47,6 @@ from recon.record import Record
 ComplexArray = NDArray[np.complexfloating]
 FloatArray = NDArray[np.floating]
 
-LATERAL = tuple(one for one in NUCLEAR_MATRIX if "z" not in one.name[-2:])
 COMPONENTS = 2
 SOLVED = 1e-3
 PROJECTED = 3e-2
@@ -65,7 +67,7 @@ def gradients_from_record(
     Parameters
     ----------
     quantities
-        Of `GRADIENTS`.
+        Of `GRADIENTS` without `AXIAL`.
     stated
         Values to keep, layer and bias among them.
     shots, components
@@ -76,13 +78,13 @@ def gradients_from_record(
     Raises
     ------
     InputError
-        A quantity is none of the gradients', or the record has several evolution times.
+        A quantity is none of the lateral gradients', or the record has several evolution times.
     """
     unknown, values = chosen(quantities, stated, nominal_values(record.instrument))
     for one in unknown:
-        if one.name not in WAVE:
+        if one.name not in WAVE or one in AXIAL:
             raise InputError(
-                f"{one.name} is not a gradient's", "calibration", "use standoff_from_record"
+                f"{one.name} is no lateral gradient's", "calibration", "use standoff_from_record"
             )
     data = unmixed(record, shots, components)
     passes = 0
