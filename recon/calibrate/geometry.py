@@ -17,8 +17,8 @@ from recon.calibrate.decomposition import decomposition
 from recon.calibrate.estimate import Estimate
 from recon.calibrate.evidence import standoff_from_record
 from recon.calibrate.geometry_fit import geometry_from_sample
-from recon.calibrate.geometry_parameters import EVERY, WAVE, with_geometry
-from recon.calibrate.gradients_fit import LATERAL, gradients_from_record
+from recon.calibrate.geometry_parameters import EVERY, LATERAL, WAVE, with_geometry
+from recon.calibrate.gradients_fit import gradients_from_record
 from recon.instrument import Instrument
 from recon.protocol import Protocol
 from recon.record import Record

@@ -14,13 +14,13 @@ from recon.calibrate.fixed import Fixed
 from recon.calibrate.geometry import Geometry
 from recon.calibrate.geometry_parameters import (
     BIAS,
+    LATERAL,
     LAYER,
     NUCLEAR_DELAY,
     SENSOR_DELAY,
     SENSOR_MATRIX,
     WAVE,
 )
-from recon.calibrate.gradients_fit import LATERAL
 from recon.calibrate.report import all_verdicts, write_report
 from recon.cli.common import progress_line
 from recon.counts.conversion import convert

@@ -12,7 +12,7 @@ from collections.abc import Callable
 from copy import copy
 from dataclasses import dataclass, field
 from functools import cached_property
-from typing import Protocol
+from typing import Any, Protocol
 
 import numpy as np
 import scipy.fft
@@ -132,6 +132,7 @@ class GeneralQuadratic:
         self.shape = operator.object_shape
         self.dtype = np.dtype(np.float32 if real else np.complex64)
         self.unit = np.ones(self.shape[0], np.float32)
+        self._unscaled: dict[str, Any] = {}
 
     @cached_property
     def linear(self) -> Array:
@@ -153,8 +154,7 @@ class GeneralQuadratic:
         """The data term for unknowns counted in units of size `unit`, (components,)."""
         other = GeneralQuadratic(self.operator, self.statistics, self.real, self.rule)
         other.unit = (self.unit * unit).astype(np.float32)
-        shared = {name: getattr(self, name) for name in ("_blocks", "_local", "_apply_normal")}
-        other.__dict__.update(shared)
+        other._unscaled = self._unscaled
         return other
 
     def value(self, x: Array) -> float:
@@ -239,19 +239,30 @@ class GeneralQuadratic:
     def _factor(self) -> FloatArray:
         return self.unit[:, None, None, None]
 
-    @cached_property
+    def _once(self, name: str, make: Callable[[], Any]) -> Any:
+        """What does not depend on the units: made when first asked for, then shared by all."""
+        if name not in self._unscaled:
+            self._unscaled[name] = make()
+        return self._unscaled[name]
+
+    @property
     def _apply_normal(self) -> Callable[[ComplexArray], ComplexArray]:
         """G by blocks of twice the size where they are exact, else by a pass over the shots."""
         operator = self.operator
-        return ToeplitzNormal(operator) if is_toeplitz(operator.model) else operator.normal
+        exact = is_toeplitz(operator.model)
+        return self._once("normal", lambda: ToeplitzNormal(operator)) if exact else operator.normal
 
-    @cached_property
+    @property
     def _local(self) -> FloatArray:
-        return local_information(self.operator)
+        return np.asarray(self._once("local", lambda: local_information(self.operator)))
 
-    @cached_property
+    @property
     def _blocks(self) -> Statistics:
         """Blocks of ideal channels, unscaled, with the record's b."""
+        blocks: Statistics = self._once("blocks", self._ideal_statistics)
+        return blocks
+
+    def _ideal_statistics(self) -> Statistics:
         model = self.operator.model
         layout, normal = normal_blocks(ForwardOperator(model.ideal, np.complex64))
         linear = scipy.fft.fft2(self.statistics.linear.astype(np.complex64))
