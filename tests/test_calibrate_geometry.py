@@ -85,7 +85,7 @@ def test_a_sample_that_is_known_gives_standoff_and_gradients():
         ),
         allowance=np.array([0.005, 0.002, 0.05, 1e-4, 1e-4, 1e-4, 1e-4]),
     )
-    # 63 errors of a normal distribution: 68 % within one standard error
+    # 63 errors of about a normal distribution: 68 % within one standard error
     assert 0.5 < np.mean(np.abs(units) < 1) < 0.8, units
 
 
@@ -104,7 +104,7 @@ def test_gradients_from_a_sample_nobody_knows():
     units = errors_in_units(
         [record] * SEEDS, MATRIX, lambda noisy: gradients_from_record(noisy, components=1), 5e-4
     )
-    assert 0.45 < np.mean(np.abs(units) < 1) < 0.85, units
+    assert 0.55 < np.mean(np.abs(units) < 1) < 0.85, units
 
 
 def test_standoff_follows_gradients_that_were_calibrated():
