@@ -1,6 +1,6 @@
 """Which of the geometry is estimated, from what, and what of it is worth carrying in.
 
-Gradients come first, since a wrong one blurs the image from which the standoff is told. A
+Lateral gradients come first, since a wrong one blurs the image that tells the standoff. A
 correction that noise may explain, or that turns no phase in the view noticeably, is reported but
 not carried in: it would cost the blocks their exactness and gain nothing.
 """
@@ -17,6 +17,7 @@ from recon.calibrate.decomposition import decomposition
 from recon.calibrate.estimate import Estimate
 from recon.calibrate.evidence import standoff_from_record
 from recon.calibrate.geometry_fit import geometry_from_sample
+from recon.calibrate.geometry_from_record import geometry_from_record
 from recon.calibrate.geometry_parameters import EVERY, LATERAL, WAVE, with_geometry
 from recon.calibrate.gradients_fit import gradients_from_record
 from recon.instrument import Instrument
@@ -90,19 +91,15 @@ def measure_geometry(
         progress("comparing geometries", done / max(most, 1))
 
     fits: list[GeometryFit] = []
-    if settings.sample is not None:
+    if settings.sample is not None and (layer or gradients):
         wanted = [*layer, *gradients]
-        if wanted:
-            fits.append(
-                geometry_from_sample(record, settings.sample, wanted, stated, progress=show)
-            )
-    else:
-        if gradients:
-            waves = [one for one in stated if one.name in EVERY]
-            fits.append(gradients_from_record(record, gradients, waves, progress=show))
-        if layer:
-            known = [*stated, *_carried(record, _own(fits, names))]
-            fits.append(standoff_from_record(record, layer, known, progress=show))
+        fits.append(geometry_from_sample(record, settings.sample, wanted, stated, progress=show))
+    elif layer and gradients:
+        fits.append(geometry_from_record(record, [*gradients, *layer], stated, progress=show))
+    elif gradients:
+        fits.append(gradients_from_record(record, gradients, stated, progress=show))
+    elif layer:
+        fits.append(standoff_from_record(record, layer, stated, progress=show))
     found = _own(fits, names)
     derived = [one for fit in fits for one in decomposition(fit).estimates]
     lines = [line for fit in fits for line in fit.undetermined]
