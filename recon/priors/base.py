@@ -53,12 +53,15 @@ class Term(ABC):
         R is itself a minimum over an auxiliary field; see `image_near`.
     redundancy
         Size of D x over that of x.
+    by_planes
+        D and the prox can be done for a few planes at a time; see `analyse_planes`.
     """
 
     symbol: Symbol = IDENTITY
     constraint: bool = False
     auxiliary: bool = False
     redundancy: int = 1
+    by_planes: bool = False
 
     @property
     def tight(self) -> bool:
@@ -69,6 +72,16 @@ class Term(ABC):
     @abstractmethod
     def analyse(self, x: Array) -> Array:
         """D x."""
+
+    def analyse_planes(self, x: Array, planes: slice) -> Array:
+        """The planes of D x, which lie along its last but two axes."""
+        return self.analyse(x)[..., planes, :, :]
+
+    def add_adjoint_planes(self, u: Array, planes: slice, total: Array) -> None:
+        """Add Dᴴ of an image that holds `u` in some planes and nothing elsewhere."""
+        whole = np.zeros((*u.shape[:-3], total.shape[-3], *u.shape[-2:]), u.dtype)
+        whole[..., planes, :, :] = u
+        np.add(total, self.adjoint(whole), out=total)
 
     def image_near(self, x: Array, target: Array) -> Array:
         """D x; with an auxiliary field, the image of x under the field nearest the target."""
@@ -106,6 +119,9 @@ class Pointwise(Term):
 
     def adjoint(self, u: Array) -> Array:
         return u
+
+    def add_adjoint_planes(self, u: Array, planes: slice, total: Array) -> None:
+        np.add(total[:, planes], u, out=total[:, planes])
 
 
 class Prior(Protocol):

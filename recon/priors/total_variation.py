@@ -49,30 +49,47 @@ class Gradient:
         self.symbol = Symbol(self._lateral(shape), self._axial(nz) if nz > 1 else None)
 
     def apply(self, x: Array) -> Array:
-        scale = np.asarray(self.scale, x.real.dtype)
-        u = np.empty((len(x), 3, *x.shape[1:]), x.dtype)
-        np.subtract(x[:, 1:], x[:, :-1], out=u[:, 0, :-1])
-        u[:, 0, -1] = 0
-        np.subtract(x[:, :, 1:], x[:, :, :-1], out=u[:, 1, :, :-1])
-        np.subtract(x[:, :, 0], x[:, :, -1], out=u[:, 1, :, -1])
-        np.subtract(x[..., 1:], x[..., :-1], out=u[:, 2, ..., :-1])
-        np.subtract(x[..., 0], x[..., -1], out=u[:, 2, ..., -1])
+        return self.apply_planes(x, slice(0, x.shape[1]))
+
+    def apply_planes(self, x: Array, planes: slice) -> Array:
+        """∇x in some planes, (c, 3, planes, ny, nx)."""
+        here = x[:, planes]
+        above = x[:, planes.start + 1 : planes.stop + 1]
+        u = np.empty((len(x), 3, *here.shape[1:]), x.dtype)
+        inside = above.shape[1]
+        np.subtract(above, here[:, :inside], out=u[:, 0, :inside])
+        u[:, 0, inside:] = 0
+        np.subtract(here[:, :, 1:], here[:, :, :-1], out=u[:, 1, :, :-1])
+        np.subtract(here[:, :, 0], here[:, :, -1], out=u[:, 1, :, -1])
+        np.subtract(here[..., 1:], here[..., :-1], out=u[:, 2, ..., :-1])
+        np.subtract(here[..., 0], here[..., -1], out=u[:, 2, ..., -1])
         for axis in range(3):
-            if scale[axis] != 1:
-                u[:, axis] *= scale[axis]
+            if self.scale[axis] != 1:
+                u[:, axis] *= x.real.dtype.type(self.scale[axis])
         return u
 
     def adjoint(self, u: Array) -> Array:
-        scale = np.asarray(self.scale, u.real.dtype)
-        along_z, along_y, along_x = (u[:, axis] * scale[axis] for axis in range(3))
-        x = -along_y - along_x
-        x[:, :, 1:] += along_y[:, :, :-1]
-        x[:, :, 0] += along_y[:, :, -1]
-        x[..., 1:] += along_x[..., :-1]
-        x[..., 0] += along_x[..., -1]
-        x[:, :-1] -= along_z[:, :-1]
-        x[:, 1:] += along_z[:, :-1]
+        x = np.zeros((len(u), *u.shape[2:]), u.dtype)
+        self.add_adjoint(u, slice(0, u.shape[2]), x)
         return x
+
+    def add_adjoint(self, u: Array, planes: slice, total: Array) -> None:
+        """Add ∇ᴴ of an image that holds `u` in some planes to (c, nz, ny, nx)."""
+        here = total[:, planes]
+        above = total[:, planes.start + 1 : planes.stop + 1]
+        for axis in range(3):
+            part = u[:, axis]
+            if self.scale[axis] != 1:
+                part = part * u.real.dtype.type(self.scale[axis])
+            if axis == 0:
+                inside = above.shape[1]
+                _take(here[:, :inside], part[:, :inside])
+                _put(above, part[:, :inside])
+                continue
+            _take(here, part)
+            turned, into = (np.moveaxis(one, axis + 1, 0) for one in (part, here))
+            _put(into[1:], turned[:-1])
+            _put(into[0], turned[-1])
 
     def weighted(self, planes: NDArray[np.floating]) -> Symbol:
         """∇ᴴ P ∇ for weights of the planes."""
@@ -94,10 +111,19 @@ class Gradient:
         return difference.T @ difference
 
 
+def _put(into: Array, values: Array) -> None:
+    np.add(into, values, out=into)
+
+
+def _take(into: Array, values: Array) -> None:
+    np.subtract(into, values, out=into)
+
+
 class TotalVariationTerm(Term):
     """∇ and the sum of its lengths."""
 
     redundancy = 3
+    by_planes = True
 
     def __init__(self, frame: Frame, joint: bool) -> None:
         self._gradient = Gradient(frame.shape, frame.voxel)
@@ -106,6 +132,12 @@ class TotalVariationTerm(Term):
 
     def analyse(self, x: Array) -> Array:
         return self._gradient.apply(x)
+
+    def analyse_planes(self, x: Array, planes: slice) -> Array:
+        return self._gradient.apply_planes(x, planes)
+
+    def add_adjoint_planes(self, u: Array, planes: slice, total: Array) -> None:
+        self._gradient.add_adjoint(u, planes, total)
 
     def adjoint(self, u: Array) -> Array:
         return self._gradient.adjoint(u)

@@ -15,6 +15,7 @@ Source: Boyd, Parikh, Chu, Peleato & Eckstein, Foundations and Trends in Machine
 
 from __future__ import annotations
 
+from collections.abc import Iterator
 from dataclasses import dataclass, field
 from functools import reduce
 from operator import add
@@ -24,8 +25,9 @@ import numpy as np
 from numpy.typing import NDArray
 
 from recon.errors import InputError
+from recon.priors.base import Term
 from recon.solvers.loop import Residuals, relative
-from recon.solvers.problem import Problem, Step
+from recon.solvers.problem import Problem, Step, Weighted
 from recon.symbol import Symbol
 
 Array = NDArray[np.inexact]
@@ -105,39 +107,65 @@ class ADMM:
         return state
 
     def advance(self, problem: Problem, state: ADMMState) -> ADMMState:
-        """One iteration, in place."""
+        """One iteration, in place; terms that allow it are done a few planes at a time."""
         self._prepare(problem, state)
-        alpha = state.u[0].real.dtype.type(self.over_relaxation)
         parts = list(zip(problem.terms, state._rho, strict=True))
-        right = problem.quadratic.linear
+        right = problem.quadratic.linear.copy()
         for (part, rho), u, d in zip(parts, state.u, state.d, strict=True):
-            target = u - d
-            target *= rho
-            right = right + part.term.adjoint(target)
+            for planes in _slabs(part.term, u):
+                target = _of(u, planes) - _of(d, planes)
+                target *= _rho(rho, planes)
+                if planes is None:
+                    np.add(right, part.term.adjoint(target), out=right)
+                else:
+                    part.term.add_adjoint_planes(target, planes, right)
         assert state._step is not None
-        x = state.x = state._step(right, state.x)
+        state.x = state._step(right, state.x)
+        del right
         sums = np.zeros(4)
         for place, (part, rho) in enumerate(parts):
-            before, d = state.u[place], state.d[place]
-            if part.term.auxiliary:
-                image = part.term.image_near(x, before - d)
-            else:
-                image = part.term.analyse(x)
-            relaxed = alpha * image
-            relaxed += (1 - alpha) * before
-            relaxed += d
-            u = part.term.prox(relaxed, part.weight / rho)
-            state.u[place], state.d[place] = u, np.subtract(relaxed, u, out=relaxed)
-            size = max(_squared(image, rho), _squared(u, rho))
-            off = np.subtract(image, u, out=None if image is x else image)
-            primal = _squared(off, rho)
-            moved = np.subtract(u, before, out=off)
-            sums += [size, primal, _squared(moved, rho), _squared(relaxed, rho)]
+            u, d = state.u[place], state.d[place]
+            for planes in _slabs(part.term, u):
+                near = _of(u, planes), _of(d, planes)
+                one, other, norms = self._split(part, _rho(rho, planes), near, state.x, planes)
+                if planes is None:
+                    state.u[place], state.d[place] = one, other
+                else:
+                    u[..., planes, :, :], d[..., planes, :, :] = one, other
+                sums += norms
         scale, primal, dual, dual_scale = np.sqrt(sums)
         state.iteration += 1
         state.primal = relative(primal, scale)
         state.dual = relative(dual, max(dual, dual_scale))
         return state
+
+    def _split(
+        self,
+        part: Weighted,
+        rho: Any,
+        near: tuple[Array, Array],
+        x: Array,
+        planes: slice | None,
+    ) -> tuple[Array, Array, NDArray[np.floating]]:
+        """New u and d of a term in some planes (None: all), and what they add to the norms."""
+        before, d = near
+        if part.term.auxiliary:
+            image = part.term.image_near(x, before - d)
+        elif planes is None:
+            image = part.term.analyse(x)
+        else:
+            image = part.term.analyse_planes(x, planes)
+        relaxed = x.real.dtype.type(self.over_relaxation) * image
+        relaxed += x.real.dtype.type(1 - self.over_relaxation) * before
+        relaxed += d
+        u = part.term.prox(relaxed, part.weight / rho)
+        relaxed -= u
+        size = max(_squared(image, rho), _squared(u, rho))
+        off = np.subtract(image, u, out=None if part.term.tight else image)
+        primal = _squared(off, rho)
+        moved = np.subtract(u, before, out=off)
+        norms = np.array([size, primal, _squared(moved, rho), _squared(relaxed, rho)])
+        return u, relaxed, norms
 
     def residuals(self, problem: Problem, state: ADMMState) -> Residuals:
         """‖Dx − u‖ over ‖u‖, and ‖u − u_before‖ over ‖d‖, in the norm weighted by P."""
@@ -180,6 +208,28 @@ class ADMM:
             state._rho.append(rho if weighted is None else planes.astype(kind)[:, None, None])
         state._step = quadratic.step(reduce(add, symbols))
         return state._step
+
+
+SLAB_BYTES = 1 << 18
+
+
+def _slabs(term: Term, u: Array) -> Iterator[slice | None]:
+    """A few planes at a time, as many as fit `SLAB_BYTES`; None for all at once."""
+    if not term.by_planes:
+        yield None
+        return
+    planes = u.shape[-3]
+    together = max(1, SLAB_BYTES // (u.nbytes // planes))
+    for start in range(0, planes, together):
+        yield slice(start, min(start + together, planes))
+
+
+def _of(u: Array, planes: slice | None) -> Array:
+    return u if planes is None else u[..., planes, :, :]
+
+
+def _rho(rho: Any, planes: slice | None) -> Any:
+    return rho if planes is None or np.ndim(rho) == 0 else rho[planes]
 
 
 def _squared(values: Array, rho: Any) -> float:
