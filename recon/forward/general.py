@@ -20,7 +20,7 @@ from recon.errors import InputError
 from recon.forward.channels import Channels
 from recon.forward.general_model import GeneralModel
 from recon.forward.off_lattice import winding
-from recon.forward.operator import fold
+from recon.forward.operator import ForwardOperator, fold
 from recon.physics.dipole import lateral_footprint
 
 ComplexArray = NDArray[np.complexfloating]
@@ -49,6 +49,9 @@ class GeneralOperator:
         self.sample_shape = (len(model), len(ideal.basis), *model.window.channels)
         self._scale = 1 / np.prod(model.grid.shape[1:]) * np.prod(model.window.pixels)
         self.tables = _Tables(model, self.dtype)
+        whole = model.window.channels == model.window.pixels and not ideal.is_one_detector
+        exact = whole and model.only_channels
+        self._ideal = ForwardOperator(ideal, dtype) if exact else None
 
     def apply(self, objects: ComplexArray) -> ComplexArray:
         """A x.
@@ -111,6 +114,9 @@ class GeneralOperator:
     def normal(self, objects: ComplexArray) -> ComplexArray:
         """Aᴴ W A x, the times summed in closed form."""
         model = self.model
+        if self._ideal is not None:
+            total = self._ideal.between_channels(objects, model.channels.information)
+            return np.tensordot(model.gram(0).astype(self.dtype), total, 1)
         share = (model.channels.information * self._scale).astype(self.dtype.char.lower())
         source, sink = self._source(objects), _Sink(self.tables, self.object_shape)
         common = None if model.courses is not None else model.gram(0).astype(self.dtype)

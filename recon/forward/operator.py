@@ -116,6 +116,19 @@ class ForwardOperator:
         unwrapped *= self.footprint
         return fold(unwrapped, (ny, nx))
 
+    def between_channels(self, objects: ComplexArray, share: NDArray[np.floating]) -> ComplexArray:
+        """Σ_j w_j A_jᴴ diag(share) A_j x of a camera, for unit time courses.
+
+        `share` (channels y, channels x) is what each channel counts; the components keep apart.
+        """
+        unwrapped = np.zeros((*self.object_shape[:2], *self.footprint.shape), self.dtype)
+        counted = share.astype(self.dtype.char.lower())
+        for part, planes in self._images(self.object_spectrum(objects)):
+            planes *= counted
+            self._back_images(part, planes, self.model.encoding.weight, unwrapped)
+        unwrapped *= self.footprint
+        return scipy.fft.ifft2(fold(unwrapped, self.object_shape[2:]), overwrite_x=True)
+
     # Several shots at a time --------------------------------------------------------------
 
     def _parts(self, start: int, stop: int) -> Iterator[slice]:
