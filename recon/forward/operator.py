@@ -152,10 +152,7 @@ class ForwardOperator:
                 if not tables.fused:
                     field *= tables.transfer(shot)
             planes = scipy.fft.ifft2(fold(fields, self.model.channels), overwrite_x=True)
-            ramp_y, ramp_x = tables.ramps(part)
-            planes *= (tables.gain * ramp_y)[:, None, :, None]
-            planes *= ramp_x[:, None, None, :]
-            yield part, planes
+            yield part, tables.turned(planes, part, np.full(len(planes), tables.gain))
 
     def _back_images(
         self,
@@ -166,11 +163,8 @@ class ForwardOperator:
     ) -> None:
         """Add the adjoint of `_images` for images (shots, components, cy, cx) to a spectrum."""
         tables = self.tables
-        ramp_y, ramp_x = (ramp.conj() for ramp in tables.ramps(shots))
-        if weight is not None:
-            ramp_y *= weight[shots, None].astype(ramp_y.real.dtype)
-        planes = planes * ramp_y[:, None, :, None]
-        planes *= ramp_x[:, None, None, :]
+        factor = np.ones(len(planes)) if weight is None else weight[shots]
+        planes = tables.turned(planes, shots, factor, back=True)
         fields = scipy.fft.fft2(planes, overwrite_x=True)
         if self.model.binning != (1, 1):
             fields = np.tile(fields, (1, 1, *self.model.binning))

@@ -93,6 +93,42 @@ class ShotTables:
         sides[0] *= encoding.amplitude[shots, None]
         return sides[0].astype(self.dtype), sides[1].astype(self.dtype)
 
+    @cached_property
+    def _signs(self) -> NDArray[np.floating] | None:
+        """What the ramps of all shots have in common where it is real, (cy, cx); else None.
+
+        Without a sensor gradient a ramp only centres the band: alternating signs.
+        """
+        encoding = self.model.encoding
+        if encoding.sensor.any() or np.iscomplex(encoding.amplitude).any():
+            return None
+        sides = [
+            np.exp(-2j * np.pi * (size // 2 * np.arange(count) % count / count))
+            for size, count in zip(self.model.grid.shape[1:], self.model.channels, strict=True)
+        ]
+        signs = sides[0][:, None] * sides[1]
+        real = np.abs(signs.imag).max() < 1e-9
+        return signs.real.astype(self.dtype.char.lower()) if real else None
+
+    def turned(
+        self, planes: ComplexArray, shots: slice, factor: NDArray[np.floating], back: bool = False
+    ) -> ComplexArray:
+        """Images (n, components, cy, cx) times the shots' ramps and a factor each.
+
+        `back` takes the conjugate, for the adjoint.
+        """
+        if self._signs is not None:
+            size = factor * self.model.encoding.amplitude[shots].real
+            whole = self._signs * size.astype(self._signs.dtype)[:, None, None]
+            return planes * whole[:, None]
+        ramp_y, ramp_x = self.ramps(shots)
+        if back:
+            ramp_y, ramp_x = ramp_y.conj(), ramp_x.conj()
+        ramp_y *= factor[:, None].astype(ramp_y.real.dtype)
+        planes = planes * ramp_y[:, None, :, None]
+        planes *= ramp_x[:, None, None, :]
+        return planes
+
     def detector_place(self, shot: int) -> tuple[int, int]:
         """The field frequency κ_f = −q that one detector sees, as indices into the band."""
         _, ny, nx = self.model.grid.shape

@@ -129,8 +129,7 @@ def accumulate(
                     f"not {operator.sample_shape[1:]}",
                     f"shots {shots.start} to {shots.stop - 1}",
                 )
-            for shot, one in zip(range(shots.start, shots.stop), samples, strict=True):
-                energy += squared_norm(one, shot) * weight[shot]
+            energy += float(squared_norms(samples, shots.start) @ weight[shots])
             yield shots, samples
             done += len(samples)
             if progress is not None:
@@ -144,8 +143,15 @@ def accumulate(
 
 def squared_norm(samples: ComplexArray, shot: int) -> float:
     """‖y‖² of one shot, refused if a sample is not finite."""
-    flat = samples.ravel().view(np.float32)
-    square = float(np.dot(flat, flat))
-    if not np.isfinite(square):
-        raise InputError("NaN or infinite sample", f"shot {shot}", "drop or mend the shot")
-    return square
+    return float(squared_norms(samples[None], shot)[0])
+
+
+def squared_norms(samples: ComplexArray, first_shot: int) -> FloatArray:
+    """‖y‖² of some shots, (shots,); a sample that is not finite is refused."""
+    flat = samples.reshape(len(samples), -1).view(np.float32)
+    squares = np.vecdot(flat, flat).astype(float)
+    bad = np.flatnonzero(~np.isfinite(squares))
+    if bad.size:
+        shot = f"shot {first_shot + bad[0]}"
+        raise InputError("NaN or infinite sample", shot, "drop or mend the shot")
+    return squares
