@@ -1,7 +1,7 @@
 """Spatially resolved NMR spectroscopic imaging with diamond quantum sensors.
 
 The names below are in the order in which data flow: describe, encode, simulate or open a record,
-reconstruct, hand over. Conventions: arrays (component, z, y, x), SI units, z = 0 at the diamond
+calibrate, reconstruct, hand over. Conventions: arrays (component, z, y, x), SI units, z = 0 at the diamond
 face. Research use only, not for diagnosis.
 """
 
@@ -15,6 +15,8 @@ from recon.band import Band
 from recon.separability import Separability
 from recon.simulate import SimulationOptions, simulate
 from recon.record import Record, RecordWriter
+from recon.counts import Acquisition, CountsRecord, CountsWriter, Tone, convert
+from recon.calibrate.calibration import Calibration, calibrate
 from recon.unknown import ComplexCube, SpeciesAmounts
 from recon.priors import (
     Box,
@@ -33,9 +35,13 @@ from recon.reconstruct import reconstruct
 from recon.result import Cube, SpeciesMaps, load_result
 
 __all__ = [
+    "Acquisition",
     "Band",
     "Box",
+    "Calibration",
     "ComplexCube",
+    "CountsRecord",
+    "CountsWriter",
     "Cube",
     "FreeDiffusion",
     "Grid",
@@ -59,10 +65,13 @@ __all__ = [
     "SpectralAxis",
     "StandingMap",
     "Support",
+    "Tone",
     "TotalGeneralisedVariation",
     "TotalVariation",
     "UndecimatedWaveletSparsity",
     "WaveletSparsity",
+    "calibrate",
+    "convert",
     "load_result",
     "reconstruct",
     "simulate",
