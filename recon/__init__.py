@@ -1,8 +1,8 @@
 """Spatially resolved NMR spectroscopic imaging with diamond quantum sensors.
 
 The names below are in the order in which data flow: describe, encode, simulate or open a record,
-calibrate, reconstruct, hand over. Conventions: arrays (component, z, y, x), SI units, z = 0 at the diamond
-face. Research use only, not for diagnosis.
+calibrate, reconstruct, hand over. Conventions: arrays (component, z, y, x), SI units, z = 0 at the
+diamond face. Research use only, not for diagnosis.
 """
 
 from recon.errors import InputError, InputWarning
