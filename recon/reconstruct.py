@@ -70,8 +70,7 @@ def reconstruct(
     memory_limit_gib
         The work is refused if it would need more.
     reality
-        What channels, layer and wavevectors really are, where that breaks the blocks; by default
-        what the record itself says (`Reality.of`).
+        What breaks the blocks; by default what the record itself says (`Reality.of`).
 
     Raises
     ------
@@ -82,7 +81,7 @@ def reconstruct(
     estimator = estimator or default_estimator(unknown, record)
     _check_memory(estimate_memory(record, unknown, estimator), memory_limit_gib)
     reading = Reading(record)
-    reality = Reality.of(record) if reality is None else reality
+    reality = reality or Reality.of(record)
     expand: ComplexArray | None = None
     read: AnyStatistics | None
     whole: Any
