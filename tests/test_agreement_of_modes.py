@@ -190,7 +190,7 @@ def test_verb_compares(record, cube, tmp_path, monkeypatch, capsys):
     drawn = ["--figures", "drawn", "--voxel", "0,5,5", *held]
     main(["quantify", "cube.h5", "record.h5", "--maps", "result.h5", *drawn])
     out = capsys.readouterr().out
-    assert "compatible" in out and "IUPAC" in out
+    assert "compatible" in out and "ICH Q2" in out
     made = load_result("amounts.h5")
     assert any("compatible" in remark for remark in made.account.remarks)
     assert made.account.provenance["limits"]["a"]["detection_mM"][0] > 0

@@ -235,7 +235,7 @@ def table(fitted: Fitted, grid: Grid) -> str:
                 *(f"{number:>11.4g}" for number in numbers),
             ]
             lines.append(f"{name if level == 0 else '':<14}" + "".join(cells) + f"{share:>11}")
-    lines.append("limits: 3 and 10 standard errors of the blank (IUPAC), one voxel, by height")
+    lines.append("limits: 3.3 and 10 standard errors of the blank (ICH Q2), one voxel, by height")
     return "\n".join(lines)
 
 

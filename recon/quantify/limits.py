@@ -1,8 +1,8 @@
 """What can be detected and quantified, and which voxels are not worth reading, with the reason.
 
-Limit of detection 3 s_B and limit of quantification 10 s_B, s_B the standard error of an amount
-where there is none of it (the blank). Convention of IUPAC: Currie, Pure Appl. Chem. 67:1699 (1995),
-and Analytical Methods Committee, Analyst 112:199 (1987), for the factors 3 and 10.
+Limit of detection 3.3 s_B and limit of quantification 10 s_B, s_B the standard error of an amount
+where there is none of it (the blank). Convention of ICH Q2(R1), and of IUPAC for errors of 5 % of
+both kinds, 3.29 s_B (Currie, Pure Appl. Chem. 67:1699, 1995).
 """
 
 from __future__ import annotations
@@ -17,7 +17,7 @@ from recon.quantify.fitted import Fitted
 
 FloatArray = NDArray[np.floating]
 
-DETECTION = 3.0
+DETECTION = 3.3
 QUANTIFICATION = 10.0
 
 CHANCE = 1e-5
@@ -100,9 +100,9 @@ def meaning(fitted: Fitted) -> dict[int, str]:
     """What each label says."""
     told = {
         Readability.QUANTIFIABLE: "amount above 10 standard errors of the blank",
-        Readability.DETECTED: "amount above 3 but not 10 standard errors of the blank: present, "
+        Readability.DETECTED: "amount above 3.3 but not 10 standard errors of the blank: present, "
         "read with care",
-        Readability.BELOW_DETECTION: "amount below 3 standard errors of the blank",
+        Readability.BELOW_DETECTION: "amount below 3.3 standard errors of the blank",
         Readability.POOR_FIT: "the noise does not explain the residual of the fit",
         Readability.NUISANCE_AT_BOUND: "line shift, width or phase at the bound it was given",
         Readability.NO_INFORMATION: "no information: the noise is unknown or infinite",
