@@ -33,7 +33,7 @@ def blank_cube(missing, seed=1):
 
 
 def test_limits_are_the_scatter_of_a_blank():
-    """3.3 and 10 times the measured scatter over voxels that hold none of the species (ICH Q2(R1))."""
+    """3.3 and 10 times the measured scatter over voxels without the species (ICH Q2(R1))."""
     cube = blank_cube(1)
     fitted = Fit(shift_Hz=Nuisance(30.0, 3.0)).fit(cube, patterns(cube))
     scatter = fitted.amounts[1].std(axis=(1, 2))
