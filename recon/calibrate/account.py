@@ -184,17 +184,27 @@ def _light(conversion: Conversion) -> Iterator[Verdict]:
         MAINS_HZ,
         "state mains_Hz as it is",
     )
-    sizes = 1e6 * np.abs(rows.pickup)
-    strongest = int(sizes.mean(axis=0).argmax())
-    yield Verdict(
-        "mains pickup in the light",
-        "ppm",
-        float(sizes[:, strongest].mean()),
-        float(sizes[:, strongest].std() / np.sqrt(len(sizes))),
-        0.0,
-        PICKUP_PPM,
-        "it is fitted and removed; look for ground loops",
-    )
+    name, size, error = _strongest_line(conversion)
+    advice = "it is fitted and removed; look for ground loops"
+    yield Verdict(f"pickup of {name}", "ppm of the light", size, error, 0.0, PICKUP_PPM, advice)
+
+
+def _strongest_line(conversion: Conversion) -> tuple[str, float, float]:
+    """The multiple of the mains that stands out most: name, r.m.s. amplitude and its error, ppm.
+
+    Amplitudes of noise alone are taken off: |u|² exceeds the true power by the line's variance.
+    """
+    look, lines = conversion.inspection, conversion.rows.pickup
+    alive = look.noise > 0
+    mean_noise = np.mean(look.noise[alive] ** 2) * (1 / alive.sum() + look.common.share)
+    count = lines.shape[1]
+    noise = look.demodulator.line_variance[-2 * count :].reshape(count, 2).sum(axis=1) * mean_noise
+    power = (np.abs(lines) ** 2).mean(axis=0)
+    size = np.sqrt(np.maximum(power - noise, 0))
+    error = np.sqrt(noise / (2 * len(lines)))
+    best = int(np.argmax(size / error))
+    name = look.demodulator.lines[len(look.demodulator.lines) - count + best].name
+    return name, 1e6 * float(size[best]), 1e6 * float(error[best])
 
 
 def _timing(conversion: Conversion) -> Iterator[Verdict]:
