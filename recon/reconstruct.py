@@ -92,7 +92,7 @@ def reconstruct(
     else:
         read, whole = None, reality.data_term(reading, unknown, progress)
         sensitivity = np.sqrt(whole.diagonal().mean(axis=1))
-    unit = _units(sensitivity)
+    unit = unit_sizes(sensitivity)
     unknown.check(record, read)
     quadratic = whole.scaled(unit)
     frame = Frame(quadratic.shape, record.specimen.grid.voxel, unit)
@@ -117,8 +117,14 @@ def _check_memory(need: int, limit_gib: float) -> None:
         )
 
 
-def _units(sensitivity: NDArray[np.floating]) -> NDArray[np.floating]:
-    """Units in which every component has unit sensitivity."""
+def unit_sizes(sensitivity: NDArray[np.floating]) -> NDArray[np.floating]:
+    """Units in which every component has unit sensitivity.
+
+    Raises
+    ------
+    InputError
+        The record is blind to a component.
+    """
     if not (sensitivity > 1e-6 * sensitivity.max()).all() or sensitivity.max() == 0:
         raise InputError(
             f"the record is blind to component {int(np.argmin(sensitivity)) + 1}",

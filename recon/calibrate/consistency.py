@@ -23,6 +23,7 @@ from recon.forward import ForwardModel, ForwardOperator
 from recon.forward.grouped import data_term
 from recon.forward.statistics import Statistics, accumulate
 from recon.protocol import Protocol
+from recon.reconstruct import unit_sizes
 from recon.record import Record
 from recon.solvers.estimate import Progress, silent
 from recon.solvers.ridge import chosen_weight
@@ -211,7 +212,7 @@ class _Problem:
         statistics: Statistics = accumulate(
             self.model, ((slice(s, s + 1), self._filled(s)) for s in range(len(self.operators)))
         )
-        self.unit = 1 / statistics.sensitivity()
+        self.unit = unit_sizes(statistics.sensitivity())
         self.quadratic = data_term(statistics, True).scaled(self.unit)
         self._step = self.quadratic.step(Symbol(chosen_weight(self.quadratic)))
         self.x = np.asarray(self._step(self.quadratic.linear), np.float32)

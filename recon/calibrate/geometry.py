@@ -90,31 +90,25 @@ def measure_geometry(
     def show(done: int, most: int) -> None:
         progress("comparing geometries", done / max(most, 1))
 
-    fits: list[GeometryFit] = []
+    fit: GeometryFit | None = None
     if settings.sample is not None and (layer or gradients):
         wanted = [*layer, *gradients]
-        fits.append(geometry_from_sample(record, settings.sample, wanted, stated, progress=show))
+        fit = geometry_from_sample(record, settings.sample, wanted, stated, progress=show)
     elif layer and gradients:
-        fits.append(geometry_from_record(record, [*gradients, *layer], stated, progress=show))
+        fit = geometry_from_record(record, [*gradients, *layer], stated, progress=show)
     elif gradients:
-        fits.append(gradients_from_record(record, gradients, stated, progress=show))
+        fit = gradients_from_record(record, gradients, stated, progress=show)
     elif layer:
-        fits.append(standoff_from_record(record, layer, stated, progress=show))
-    found = _own(fits, names)
-    derived = [one for fit in fits for one in decomposition(fit).estimates]
-    lines = [line for fit in fits for line in fit.undetermined]
-    carried = (*stated, *_carried(record, found))
-    return FoundGeometry((*found, *stated), tuple(derived), carried, tuple(lines))
-
-
-def _own(fits: Sequence[GeometryFit], stated: set[str]) -> list[Estimate]:
-    """What the fits estimated themselves; the first to do so counts."""
-    found: dict[str, Estimate] = {}
-    for fit in fits:
-        for one in fit.estimates:
-            if not one.fixed and one.name not in stated:
-                found.setdefault(one.name, one)
-    return list(found.values())
+        fit = standoff_from_record(record, layer, stated, progress=show)
+    if fit is None:
+        return FoundGeometry(tuple(stated), (), tuple(stated), ())
+    found = [one for one in fit.estimates if one.name not in names]
+    return FoundGeometry(
+        (*found, *stated),
+        decomposition(fit).estimates,
+        (*stated, *_carried(record, found)),
+        fit.undetermined,
+    )
 
 
 def _carried(record: Record, found: Sequence[Estimate]) -> list[Estimate]:

@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 import tempfile
+from dataclasses import replace
 from pathlib import Path
 
 import click
@@ -50,10 +51,9 @@ from recon.specimen import Specimen
 @click.option("--without-shots", is_flag=True, help="Do not compare the shots with each other.")
 @click.option(
     "--geometry",
-    default="depth_um,nuclear",
-    show_default=True,
+    default=None,
     help="What of the geometry is estimated, by commas: depth_um, thickness_um, bias, nuclear, "
-    "sensor, delays; or none.",
+    "sensor, delays; or none. By default depth_um,nuclear where a record can tell them.",
 )
 @click.option(
     "--sample",
@@ -69,14 +69,14 @@ def verb(
     reference_line: tuple[str, ...],
     without_drift: bool,
     without_shots: bool,
-    geometry: str,
+    geometry: str | None,
     sample: Path | None,
 ) -> None:
     """Estimate from MEASURED (counts or a record) what the description only guesses."""
     settings = Calibration(
         drift=None if without_drift else LineDrift(tuple(reference_line)),
         shots=None if without_shots else ShotConsistency(frequency=not without_drift, rounds=2),
-        geometry=geometry_named(geometry, sample),
+        geometry=None if geometry is None else geometry_named(geometry, sample),
         fixed=Fixed() if fixed is None else Fixed.from_toml(fixed),
     )
     with progress_line() as line, tempfile.TemporaryDirectory() as scratch:
@@ -87,6 +87,8 @@ def verb(
             record = conversion.record
         else:
             record = Record.open(measured)
+        if geometry is None and (sample is not None or tells_geometry(record)):
+            settings = replace(settings, geometry=geometry_named("depth_um,nuclear", sample))
         calibrated = calibrate(record, output, settings, progress=line)
         line("writing the report", None)
         written = write_report(report, conversion, calibrated)
@@ -98,6 +100,11 @@ def verb(
     for finding in () if conversion is None else conversion.findings:
         click.echo(f"note: {finding}")
     click.echo(f"{output}: calibrated record; report of {len(written)} files in {report}")
+
+
+def tells_geometry(record: Record) -> bool:
+    """A camera and a single evolution time: what estimates without a known sample need."""
+    return record.instrument.camera is not None and len(record.protocol.evolutions[0]) == 1
 
 
 def geometry_named(text: str, sample: Path | None) -> Geometry | None:
