@@ -134,6 +134,23 @@ def test_decay_is_found_within_its_error(quiet: Record, level: float) -> None:
     assert np.abs(found).max() < 3.5 and np.mean(np.abs(found)) < 2
 
 
+def test_shots_that_show_nothing_are_said_to_tell_nothing(quiet: Record) -> None:
+    """Noise alone: nothing is corrected, and one line says so."""
+    rng = np.random.default_rng(0)
+    noise = rng.standard_normal((*quiet.shape, 2)).view(complex)[..., 0] * quiet.noise_sd
+    empty = Record.from_arrays(
+        quiet.instrument,
+        quiet.protocol,
+        noise / np.sqrt(2),
+        quiet.description_json,
+        noise_sd=quiet.noise_sd,
+    )
+    found = calibrate(empty, settings=Calibration(geometry=None))
+    assert found.factors is None and "overlap too little" in found.lines[0]
+    assert not found.phase_rad.any() and np.ptp(found.frequency_Hz) < 1e-3
+    assert np.median(found.drift.raw_error_Hz) > 1e3
+
+
 def test_decay_needs_time_and_shots(quiet: Record) -> None:
     factors = shot_factors(quiet, ShotConsistency(rounds=1))
     still = replace(quiet.protocol, clock_time=np.zeros(24))

@@ -16,7 +16,7 @@ from pathlib import Path
 import numpy as np
 from numpy.typing import NDArray
 
-from recon.calibrate.consistency import ShotConsistency, ShotFactors, shot_factors
+from recon.calibrate.consistency import ShotConsistency, ShotFactors, UntoldError, shot_factors
 from recon.calibrate.decay import Decay, measure_decay
 from recon.calibrate.drift import Drift, LineDrift, measure_drift
 from recon.calibrate.fixed import Fixed
@@ -62,7 +62,8 @@ class Calibrated:
     """What was found, and the corrected record; `nominal` is the instrument as described.
 
     `drift`, `factors`, `decay`, `geometry` are None where nothing was estimated; `frequency_Hz` and
-    `phase_rad` are the corrections that were applied to each shot.
+    `phase_rad` are the corrections that were applied to each shot; `lines` say what the record does
+    not tell.
     """
 
     record: Record
@@ -73,6 +74,7 @@ class Calibrated:
     geometry: FoundGeometry | None
     frequency_Hz: FloatArray  # noqa: N815
     phase_rad: FloatArray
+    lines: tuple[str, ...] = ()
 
 
 def calibrate(
@@ -100,14 +102,19 @@ def calibrate(
         frequency += shrunk(drift.frequency_Hz, drift.error_Hz, about_mean=True)
     turned = _turned(record, frequency)
     factors, phase = None, np.zeros(shots)
+    lines: list[str] = []
     decay = _given_decay(record, fixed)
     if settings.shots is not None and shots >= 3:
         wanted = replace(
             settings.shots, frequency=settings.shots.frequency and fixed.field_offset_Hz is None
         )
-        factors = shot_factors(turned, wanted, progress)
+        try:
+            factors = shot_factors(turned, wanted, progress)
+        except UntoldError as error:
+            lines.append(str(error))
+    if factors is not None:
         phase = shrunk(factors.phase_rad, factors.error(1))
-        if wanted.frequency:
+        if fixed.field_offset_Hz is None and settings.shots and settings.shots.frequency:
             frequency += shrunk(factors.frequency_Hz, factors.error(2))
         if decay is None and settings.decay and shots >= 6:
             decay = _if_any(measure_decay(record.protocol, factors))
@@ -120,7 +127,8 @@ def calibrate(
         instrument, protocol = geometry.applied(straight)
         record = replace(record, instrument=instrument)
     corrected = _written(record, path, protocol, frequency, progress)
-    return Calibrated(corrected, nominal, drift, factors, decay, geometry, frequency, phase)
+    found = (drift, factors, decay, geometry, frequency, phase)
+    return Calibrated(corrected, nominal, *found, lines=tuple(lines))
 
 
 def shrunk(values: FloatArray, errors: FloatArray, *, about_mean: bool = False) -> FloatArray:

@@ -31,7 +31,14 @@ from recon.symbol import Symbol
 from recon.unknown import SpeciesAmounts
 
 FloatArray = NDArray[np.float64]
+TELLING_RAD = 0.5
+"""Median standard error of a phase above which shots are said to tell nothing of each other."""
+
 Step = Callable[[NDArray[np.float32]], NDArray[np.float32]]
+
+
+class UntoldError(InputError):
+    """A record does not tell what was asked of it."""
 
 
 @dataclass(frozen=True)
@@ -89,7 +96,8 @@ def shot_factors(
     Raises
     ------
     InputError
-        The record is too short for its own unknowns, or does not fit the model.
+        The record is too short for its own unknowns, or does not fit the model; `UntoldError` where
+        its shots overlap too little.
     """
     settings = settings or ShotConsistency()
     parts, shots = 2 + settings.frequency, len(record)
@@ -103,6 +111,13 @@ def shot_factors(
         spread = np.sqrt(np.maximum(np.diag(covariance), 1e-30)).reshape(parts, shots)
         if (np.abs(change) / spread).max() < settings.tolerance:
             break
+    if not np.median(spread[1]) < TELLING_RAD or np.abs(total[1]).max() > np.pi:
+        raise UntoldError(
+            f"the shots overlap too little to be compared: phases are known to "
+            f"{np.median(spread[1]):.2g} rad",
+            "agreement of the shots",
+            "leave it out, or measure more shots",
+        )
     frequency = total[2] if settings.frequency else np.zeros(shots)
     return ShotFactors(total[0], total[1], frequency, covariance)
 

@@ -28,6 +28,9 @@ FloatArray = NDArray[np.float64]
 ComplexArray = NDArray[np.complex128]
 
 
+SEEN = 10.0
+"""Energy above the noise, in its own standard deviations, below which a shot shows no line."""
+
 UNKNOWN_HZ = 1e6
 """Standard error of a frequency of which a shot says nothing."""
 
@@ -169,6 +172,9 @@ class _Lines:
         turn = np.exp(2j * np.pi * frequency * self.times)
         straight = turn[:, None] * spread * turn.conj()
         images = self.basis.conj().T @ straight @ self.basis
+        noise = variance * channels * len(images)
+        if np.trace(images).real < noise + SEEN * variance * (1 + np.sqrt(channels * len(images))):
+            return UNKNOWN_HZ
         images -= variance * channels * np.eye(len(images))
         values, vectors = np.linalg.eigh(images)
         images = (vectors * np.maximum(values, 0)) @ vectors.conj().T

@@ -95,7 +95,8 @@ def verb(
         found = all_verdicts(conversion, calibrated)
     for one in found:
         click.echo(f"  {one}")
-    for told in () if calibrated.geometry is None else calibrated.geometry.lines:
+    more = () if calibrated.geometry is None else calibrated.geometry.lines
+    for told in (*calibrated.lines, *more):
         click.echo(f"note: {told}")
     for finding in () if conversion is None else conversion.findings:
         click.echo(f"note: {finding}")
